@@ -1,0 +1,1 @@
+"""The nouns of the job: grids, layers, settings, totals, dates, errors."""

@@ -1,0 +1,1 @@
+"""The invented Morrowfell area: a forward model that keeps its truth."""

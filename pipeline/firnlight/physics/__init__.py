@@ -1,0 +1,1 @@
+"""Published formulas as functions of arrays: no files, labels, clock or scheduler."""

@@ -1,0 +1,1 @@
+"""Arrays and tables to text and pictures, as bytes."""

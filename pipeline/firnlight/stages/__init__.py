@@ -1,0 +1,1 @@
+"""Named steps of the chain: which layers each needs and makes, and which formulas it calls."""

@@ -1,0 +1,1 @@
+"""Numbers with their citations: TOML only, read through core.tables."""
