@@ -156,6 +156,17 @@ class Workflow(_Section):
         """A path of the file as an absolute one."""
         return (self.file.parent / written).resolve()
 
+    def remarks(self) -> list[str]:
+        """What the settings leave out, in sentences for the screen."""
+        said = []
+        if self.surface.elevation is None:
+            said.append("No elevation: sea-level pressure everywhere and one elevation band.")
+        if self.surface.land_cover is None:
+            said.append("No land cover: one class, all.")
+        if self.regions.file is None:
+            said.append("No regions: the tiles are one region.")
+        return said
+
     def tile_path(self, written: str, tile: str) -> Path:
         """A path with {tile} filled in."""
         return self.path(written.replace("{tile}", tile))

@@ -62,7 +62,10 @@ class Ledger:
     def __init__(self, path: Path, read_only: bool = False) -> None:
         self.path = path
         try:
-            if read_only:
+            if read_only and not path.exists():
+                self._db = sqlite3.connect(":memory:")
+                self._db.executescript(f"{_TABLES} pragma user_version = {SCHEMA};")
+            elif read_only:
                 self._db = sqlite3.connect(f"{path.as_uri()}?mode=ro", uri=True, timeout=30)
             else:
                 self._db = sqlite3.connect(path, timeout=30)
@@ -115,14 +118,22 @@ class Ledger:
             with self._transaction() as db:
                 db.executemany("insert or replace into content values (?, ?, ?, ?, ?, ?)", rows)
 
+    def record_products(self, products: Iterable[Product]) -> None:
+        """Record products that are in place."""
+        with self._transaction() as db:
+            self._put(db, products)
+
+    @staticmethod
+    def _put(db: sqlite3.Connection, products: Iterable[Product]) -> None:
+        db.executemany(
+            "insert or replace into product values (?, ?, ?, ?, ?, ?, ?, ?)",
+            [(p.tile, p.day.isoformat(), p.name, p.path, p.key, p.size, p.mtime_ns, p.digest) for p in products],
+        )
+
     def record(self, tile: str, day: dt.date, products: Iterable[Product], scenes: str, finished: str, seconds: float) -> None:
         """Record the products of a tile-day, after they are in place."""
         with self._transaction() as db:
-            for one in products:
-                db.execute(
-                    "insert or replace into product values (?, ?, ?, ?, ?, ?, ?, ?)",
-                    (one.tile, one.day.isoformat(), one.name, one.path, one.key, one.size, one.mtime_ns, one.digest),
-                )
+            self._put(db, products)
             db.execute(
                 "insert or replace into tile_day values (?, ?, ?, ?, ?)", (tile, day.isoformat(), scenes, finished, seconds)
             )
@@ -132,10 +143,15 @@ class Ledger:
         rows = self._db.execute("select subject, reason, day, tile, since from refusal order by day, subject")
         return [Refusal(r[0], r[1], dt.date.fromisoformat(r[2]) if r[2] else None, r[3], r[4]) for r in rows]
 
-    def record_refusals(self, refusals: list[Refusal], now: str) -> None:
-        """Make the list of refused inputs be `refusals`; an old one keeps the time it was first met."""
+    def record_refusals(self, refusals: list[Refusal], now: str, looked_at: Iterable[tuple[str, dt.date]]) -> None:
+        """Make the list of refused inputs be `refusals`, and what is known of tile-days not looked at.
+
+        An old refusal keeps the time it was first met.
+        """
         old = {one.subject: one for one in self.refusals()}
-        new = {one.subject: one for one in refusals}
+        seen = set(looked_at)
+        elsewhere = {s: r for s, r in old.items() if r.tile and r.day and (r.tile, r.day) not in seen}
+        new = elsewhere | {one.subject: one for one in refusals}
         if {s: r.reason for s, r in old.items()} == {s: r.reason for s, r in new.items()}:
             return
         with self._transaction() as db:

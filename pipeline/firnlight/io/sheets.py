@@ -1,0 +1,202 @@
+"""Tables in and out: totals of a tile-day as Parquet, and answers as CSV, Parquet or JSON."""
+
+from __future__ import annotations
+
+import csv
+import datetime as dt
+import io
+import json
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, fields
+from decimal import Decimal
+from pathlib import Path
+from typing import Any
+
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+from firnlight.core.errors import InputProblem, SettingsProblem
+from firnlight.core.totals import Totals
+from firnlight.io.atomic import move_into_place, replacing, scratch_path
+
+STATES = ("snow-free", "snow", "unseen")
+_WIDE = pa.decimal128(38, 0)  # pyarrow's int64 sum wraps silently
+_KEYS = ("region", "region_name", "land_cover", "snow", "band_low_m", "band_high_m")
+_COUNTS = ("cells", "unseen_cells")
+_UNITS = {
+    "albedo": "cm2 x 0.0001", "snow_fraction": "cm2 x 0.0001", "insolation": "cm2 x 0.1 W m-2",
+    "absorbed": "cm2 x 0.1 W m-2", "u_local": "cm2 x 0.01 W m-2", "u_calibration": "cm2 x 0.01 W m-2",
+    "u_sky": "cm2 x 0.01 W m-2", "u_noise2": "(cm2 x 0.01 W m-2)^2", "cells": "1", "unseen_cells": "1",
+}  # fmt: skip
+
+
+@dataclass(frozen=True)
+class Row:
+    """One row of totals: whose ground, in which state, and how much of everything."""
+
+    region: str
+    region_name: str
+    land_cover: str
+    snow: str
+    band_low_m: float | None
+    band_high_m: float | None
+    totals: Totals
+
+    @property
+    def order(self) -> tuple[str, str, str, float, float]:
+        low = -math.inf if self.band_low_m is None else self.band_low_m
+        high = math.inf if self.band_high_m is None else self.band_high_m
+        return self.region, self.land_cover, self.snow, low, high
+
+
+def _sum_names() -> list[str]:
+    return [f.name for f in fields(Totals) if f.name != "bins"]
+
+
+def _schema(metadata: Mapping[str, str]) -> pa.Schema:
+    columns = [pa.field(name, pa.float64() if name.endswith("_m") else pa.string()) for name in _KEYS]
+    for name in _sum_names():
+        kind = pa.int64() if name in _COUNTS else _WIDE
+        columns.append(pa.field(name, kind, metadata={"unit": _UNITS.get(name, "cm2")}))
+    columns.append(pa.field("bins", pa.list_(pa.int64()), metadata={"unit": "cm2", "bins": "0.01 of albedo"}))
+    return pa.schema(columns, metadata=dict(metadata))
+
+
+def region_rows(table: Any, totals: Sequence[Totals]) -> list[Row]:
+    """Totals per stratum and state to rows per region, land cover, state and elevation band, sorted.
+
+    A stratum counts for every region that its cells lie in, so nested regions each get the whole of it.
+    """
+    sums: dict[tuple[object, ...], Totals] = {}
+    for number, stratum in enumerate(table.strata):
+        for state, name in enumerate(STATES):
+            one = totals[number * 3 + state]
+            if not (one.cells or one.unseen_cells):
+                continue
+            for region in stratum.regions:
+                key = (region, stratum.land_cover, name, stratum.band_low_m, stratum.band_high_m)
+                sums[key] = sums[key] + one if key in sums else one
+    names = table.region_names
+    rows = [Row(k[0], names[k[0]], k[1], k[2], k[3], k[4], total) for k, total in sums.items()]  # type: ignore[arg-type, index]
+    return sorted(rows, key=lambda row: row.order)
+
+
+class Sheet:
+    """A finished Parquet file beside its final place."""
+
+    def __init__(self, path: Path, table: pa.Table) -> None:
+        self.path = path
+        path.parent.mkdir(parents=True, exist_ok=True)
+        self._scratch = scratch_path(path)
+        pq.write_table(table, self._scratch, compression="zstd", write_statistics=True)
+
+    def publish(self) -> None:
+        move_into_place(self._scratch, self.path)
+
+    def discard(self) -> None:
+        self._scratch.unlink(missing_ok=True)
+
+
+def prepare_totals(
+    path: Path, table: Any, totals: Sequence[Totals], tile: str, day: dt.date, key: str, scenes: tuple[str, ...]
+) -> Sheet:
+    """Write the totals of a tile-day beside their final place; nothing is seen before `publish`."""
+    rows = region_rows(table, totals)
+    metadata = {"firnlight:key": key, "tile": tile, "day": day.isoformat(), "scenes": json.dumps(scenes)}
+    columns: dict[str, list[object]] = {name: [getattr(row, name) for row in rows] for name in _KEYS}
+    for name in _sum_names():
+        values = [getattr(row.totals, name) for row in rows]
+        columns[name] = list(values) if name in _COUNTS else [Decimal(value) for value in values]
+    columns["bins"] = [list(row.totals.bins) or None for row in rows]
+    return Sheet(path, pa.table(columns, schema=_schema(metadata)))
+
+
+@dataclass(frozen=True)
+class DayTotals:
+    """The totals file of one tile-day."""
+
+    tile: str
+    day: dt.date
+    key: str
+    scenes: tuple[str, ...]
+    rows: tuple[Row, ...]
+
+
+def read_totals(path: Path) -> DayTotals:
+    """Read the totals of a tile-day.
+
+    Raises
+    ------
+    InputProblem : the file is not one of ours, or damaged.
+    """
+    try:
+        table = pq.read_table(path, partitioning=None)
+        meta = {k.decode(): v.decode() for k, v in (table.schema.metadata or {}).items()}
+        data = table.to_pydict()
+        rows = []
+        for n in range(table.num_rows):
+            sums = {name: int(data[name][n]) for name in _sum_names()}
+            keys = {name: data[name][n] for name in _KEYS}
+            rows.append(Row(**keys, totals=Totals(**sums, bins=tuple(data["bins"][n] or ()))))
+        return DayTotals(
+            meta["tile"], dt.date.fromisoformat(meta["day"]), meta["firnlight:key"],
+            tuple(json.loads(meta["scenes"])), tuple(rows),
+        )  # fmt: skip
+    except (pa.ArrowException, OSError, KeyError, ValueError) as error:
+        raise InputProblem(
+            str(path), "totals", str(error) or type(error).__name__, "a totals file of this store",
+            "delete the file: the next night makes it again from the maps",
+        ) from error  # fmt: skip
+
+
+def _plain(value: object) -> object:
+    """NaN is an empty place, never 0."""
+    if isinstance(value, float) and not math.isfinite(value):
+        return None
+    return value.isoformat() if isinstance(value, dt.date) else value
+
+
+def _guarded(value: object) -> object:
+    """Text that a spreadsheet would run as a formula gets a leading apostrophe."""
+    return f"'{value}" if isinstance(value, str) and value[:1] in ("=", "+", "-", "@", "\t", "\r") else value
+
+
+def answer_bytes(rows: Sequence[Mapping[str, object]], units: Mapping[str, str], about: Mapping[str, object], ending: str) -> bytes:
+    """A table as the bytes of a .csv, .json or .parquet file; empty where unknown.
+
+    Raises
+    ------
+    SettingsProblem : another ending.
+    """
+    names = list(units)
+    if ending == ".csv":
+        text = io.StringIO()
+        writer = csv.writer(text, lineterminator="\n")
+        writer.writerow(names)
+        writer.writerows([_guarded(_plain(row[name])) for name in names] for row in rows)
+        return text.getvalue().encode("utf-8")
+    if ending == ".json":
+        body = {**about, "units": dict(units), "rows": [{n: _plain(row[n]) for n in names} for row in rows]}
+        return (json.dumps(body, indent=1, ensure_ascii=False, allow_nan=False) + "\n").encode("utf-8")
+    if ending == ".parquet":
+        columns = {name: [_plain(row[name]) for row in rows] for name in names}
+        table = pa.table({name: pa.array(values) for name, values in columns.items()})
+        schema = pa.schema(
+            [field.with_metadata({"unit": units[field.name]}) for field in table.schema],
+            metadata={key: json.dumps(value) for key, value in about.items()},
+        )
+        sink = pa.BufferOutputStream()
+        pq.write_table(table.cast(schema), sink, compression="zstd")
+        return sink.getvalue().to_pybytes()
+    raise SettingsProblem("--out", "file ending", ending or "none", ".csv, .parquet or .json", "end the file name in one of them")
+
+
+def write_answer(path: Path, rows: Sequence[Mapping[str, object]], units: Mapping[str, str], about: Mapping[str, object]) -> None:
+    """Write a table; a CSV gets its units and description in a .json beside it."""
+    data = answer_bytes(rows, units, about, path.suffix.lower())
+    with replacing(path) as scratch:
+        scratch.write_bytes(data)
+    if path.suffix.lower() == ".csv":
+        with replacing(path.with_suffix(".json")) as scratch:
+            scratch.write_text(json.dumps({**about, "units": dict(units)}, indent=1, ensure_ascii=False) + "\n", encoding="utf-8")

@@ -1,0 +1,143 @@
+"""The per-cell chain in plain numpy: digital numbers to stored integers. (reference twin of chain_fast.py)"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from firnlight.core.grid import Window
+from firnlight.core.lattice import Lattice
+from firnlight.physics.broadband import Conversion, albedo, uncertainty_parts
+from firnlight.physics.clearsky import day_mean_insolation
+from firnlight.physics.snow import is_snow, ndsi, snow_fraction
+
+Arrays = dict[str, NDArray[Any]]
+
+
+def _steps(values: NDArray[np.float64], per_unit: float, highest: int) -> NDArray[np.int16]:
+    return np.minimum(np.floor(values * per_unit + 0.5), highest).astype(np.int16)
+
+
+def albedo_block(
+    reflectance: dict[str, NDArray[np.float64]],
+    flags: NDArray[np.uint8],
+    sun_zenith_deg: NDArray[np.float64],
+    *,
+    zenith_limit_deg: float,
+    ground: Conversion,
+    snow: Conversion,
+    noise: dict[str, float],
+    calibration: float,
+    fraction_name: str,
+    range_limits: tuple[float, float],
+    bits: dict[str, int],
+    fill: int,
+) -> Arrays:
+    """Albedo, its uncertainty, snow fraction and quality of a block.
+
+    Parameters
+    ----------
+    reflectance : common name -> (y, x); NaN where there is no data. [1]
+    flags : (y, x) quality bits from the provider: missing, cloud, shadow, saturated count, others are dropped.
+    sun_zenith_deg : (y, x) at the time of the scene. [deg]
+    ground, snow : the conversion of each kind of cell.
+    noise : independent standard uncertainty of each band. [1]
+    calibration : relative standard uncertainty shared by all bands.
+    range_limits : albedo outside is flagged and not used; inside but beyond 0..1 it is set to the limit and flagged.
+    bits : bit values of the quality flags.
+    fill : stored integer of an unseen cell.
+
+    Returns
+    -------
+    albedo, snow_fraction (y, x) int16, albedo_u (4, y, x) int16: total, independent, local, shared; quality (y, x)
+    uint8. Stored integers in steps of 0.0001; a cell that is missing, cloud, shadow, saturated, under a low sun or
+    out of range is `fill` in all but quality.
+    """
+    kept = bits["missing"] | bits["cloud"] | bits["shadow"] | bits["saturated"]
+    quality = flags & np.uint8(kept)
+    lost = np.isnan(np.stack(list(reflectance.values()))).any(axis=0)
+    quality = np.where(lost, quality | bits["missing"], quality)
+    quality = np.where(sun_zenith_deg <= zenith_limit_deg, quality, quality | bits["low_sun"])
+    green, nir, swir = (reflectance[name] for name in ("green", "nir", "swir16"))
+    snowy = is_snow(green, nir, swir)
+    values, parts = [], []
+    for form in (ground, snow):
+        bands = np.stack([reflectance[name] for name in form.bands])
+        values.append(albedo(bands, form))
+        parts.append(uncertainty_parts(bands, form, np.array([noise[name] for name in form.bands]), calibration))
+    value = np.where(snowy, values[1], values[0])
+    usable = quality == 0
+    outside = usable & ~((value >= range_limits[0]) & (value <= range_limits[1]))
+    quality = np.where(outside, quality | bits["outside_range"], quality)
+    seen = quality == 0
+    quality = np.where(seen & ((value < 0) | (value > 1)), quality | bits["set_to_limit"], quality)
+    quality = np.where(seen & snowy, quality | bits["snow"], quality)
+    safe = np.where(seen, np.clip(value, 0.0, 1.0), 0.0)
+    split = [np.where(seen, np.where(snowy, parts[1][k], parts[0][k]), 0.0) for k in range(3)]
+    total = np.sqrt(split[0] ** 2 + split[1] ** 2 + split[2] ** 2)
+    share = np.where(seen, snow_fraction(ndsi(green, swir), fraction_name), 0.0)
+
+    def stored(field: NDArray[np.float64]) -> NDArray[np.int16]:
+        return np.where(seen, _steps(field, 10000.0, 10000), np.int16(fill)).astype(np.int16)
+
+    return {
+        "albedo": stored(safe),
+        "albedo_u": np.stack([stored(one) for one in (total, *split)]),
+        "snow_fraction": stored(np.nan_to_num(share)),
+        "quality": quality.astype(np.uint8),
+    }
+
+
+def flux_block(
+    albedo_stored: NDArray[np.int16],
+    albedo_u_stored: NDArray[np.int16],
+    elevation_m: NDArray[np.float32],
+    window: Window,
+    moments: Lattice,
+    level0_m: float,
+    level_step_m: float,
+    relative_u: float,
+    fill: int,
+) -> Arrays:
+    """Insolation, absorbed shortwave and its uncertainty of a block, from stored albedo.
+
+    Parameters
+    ----------
+    albedo_stored : (y, x); albedo_u_stored : (4, y, x).
+    elevation_m : (y, x); NaN or outside the levels gives an unseen cell. [m]
+    moments : lattice of (levels, orders): time mean of G0 r^k, see clearsky.day_moments. [W m-2]
+    level0_m, level_step_m : heights of the levels. [m]
+    relative_u : relative standard uncertainty of insolation, shared by all cells.
+
+    Returns
+    -------
+    insolation, absorbed_shortwave, absorbed_shortwave_u : (y, x) int16 in steps of 0.1 W m-2.
+        absorbed = insolation x (1 - albedo) of the stored integers, rounded once, so that reflected = insolation -
+        absorbed closes exactly.
+    """
+    nodes = moments.at(window)
+    level = (elevation_m.astype(np.float64) - level0_m) / level_step_m
+    seen = (albedo_stored != fill) & (level >= 0) & (level <= nodes.shape[2] - 1)
+    level = np.where(seen, level, 0.0)
+    low = np.minimum(level.astype(np.int64), nodes.shape[2] - 2)
+    share = (level - low)[..., np.newaxis]
+    rows, cols = np.indices(low.shape)
+    here = nodes[rows, cols, low] + (nodes[rows, cols, low + 1] - nodes[rows, cols, low]) * share
+    light = day_mean_insolation(here, np.where(seen, albedo_stored, 0) / 10000.0)
+    s = np.minimum(np.floor(light * 10.0 + 0.5), 8000).astype(np.int64)
+    dark = 10000 - np.where(seen, albedo_stored, 0).astype(np.int64)
+    absorbed = (s * dark + 5000) // 10000
+    parts = [s * np.where(seen, albedo_u_stored[k], 0) / 100000.0 for k in (1, 2, 3)]
+    parts.append(s * dark / 100000.0 * relative_u)
+    total = np.sqrt(sum(part * part for part in parts))
+
+    def stored(field: NDArray[Any]) -> NDArray[np.int16]:
+        return np.where(seen, field, fill).astype(np.int16)
+
+    return {
+        "insolation": stored(s),
+        "absorbed_shortwave": stored(absorbed),
+        "absorbed_shortwave_u": stored(_steps(np.asarray(total), 10.0, 8000)),
+    }

@@ -1,0 +1,83 @@
+"""Are the settings and every input good? Everything is opened and read once; nothing is written."""
+
+from __future__ import annotations
+
+import time
+from dataclasses import dataclass
+
+import numpy as np
+
+from firnlight.core.errors import InputProblem
+from firnlight.core.settings import Workflow
+from firnlight.io.bands import SceneReader
+from firnlight.io.rasters import open_raster, read_window
+from firnlight.run.engine import worker_count
+from firnlight.run.ledger import Ledger
+from firnlight.run.plan import Planner, Span
+from firnlight.run.progress import Listener, Step
+from firnlight.run.store import Store
+from firnlight.run.tile import BLOCK_COLS, BLOCK_ROWS
+
+
+@dataclass(frozen=True)
+class Checked:
+    """What was looked at and what is wrong with it."""
+
+    tiles: int
+    scenes: int
+    problems: list[str]
+
+    def sentence(self) -> str:
+        state = "all good" if not self.problems else f"{len(self.problems)} problems"
+        return f"Checked {self.scenes} scenes of {self.tiles} tiles: {state}. Nothing was written."
+
+    def data(self) -> dict[str, object]:
+        return {"version": 1, "tiles": self.tiles, "scenes": self.scenes, "problems": self.problems}
+
+
+def check_inputs(workflow: Workflow, tell: Listener) -> Checked:
+    """Open everything that the workflow names and read every block of it once."""
+    store = Store(workflow.path(workflow.store.path))
+    # an empty ledger: every tile-day is looked at as if it were new
+    ledger = Ledger(store.root / "no such ledger", read_only=True)
+    try:
+        planner = Planner(workflow, store, ledger, worker_count(workflow.engine.workers))
+    finally:
+        ledger.close()
+    problems: list[str] = []
+    count, begun = 0, time.monotonic()
+    due = planner.due(Span())
+    _ = planner.ground.regions
+    for number, (tile, day) in enumerate(due, 1):
+        before = len(planner.refusals)
+        try:
+            decision = planner.decide(tile, day)
+        except InputProblem as problem:
+            problems.append(str(problem))
+            continue
+        for scene, numbers in zip(decision.job.scenes, decision.job.numbers, strict=True) if decision.job else ():
+            count += 1
+            try:
+                reader = SceneReader(scene, numbers.bands)
+                seen = False
+                for window in scene.grid.windows(BLOCK_ROWS, BLOCK_COLS):
+                    values, nodata, _flags = reader.read(window)
+                    empty = (values == nodata[:, None, None]) | ~np.isfinite(values.astype(np.float32))
+                    seen = seen or not empty.any(axis=0).all()
+                if not seen:
+                    problems.append(f"{scene.item_path}: scene {scene.id}: no cell with data in all bands.")
+            except InputProblem as problem:
+                problems.append(str(problem))
+        bad = len(planner.refusals) > before
+        tell(Step(f"{tile} {day}", number, len(due), "refused" if bad else "read", time.monotonic() - begun))
+    for tile in planner.ground.grids:
+        elevation = planner.ground.of(tile).elevation
+        if elevation:
+            try:
+                dataset = open_raster(elevation)
+                for window in planner.ground.grids[tile].windows(BLOCK_ROWS, BLOCK_COLS):
+                    read_window(dataset, window)
+            except InputProblem as problem:
+                problems.append(str(problem))
+    problems += [refusal.reason for refusal in planner.refusals]
+    return Checked(len(planner.ground.grids), count, problems)

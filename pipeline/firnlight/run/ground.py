@@ -1,0 +1,185 @@
+"""What never changes from night to night: each tile's place, cell areas, elevation and strata."""
+
+from __future__ import annotations
+
+import json
+from dataclasses import dataclass
+from functools import cached_property
+from pathlib import Path
+
+from firnlight.core.errors import InputProblem
+from firnlight.core.grid import Grid
+from firnlight.core.lattice import Lattice
+from firnlight.core.settings import Workflow
+from firnlight.io import ground as places
+from firnlight.io.atomic import write_text
+from firnlight.io.fingerprints import text_id
+from firnlight.io.ownership import neighbours
+from firnlight.io.rasters import grid_of
+from firnlight.io.regions import Regions, read_regions, whole_area
+from firnlight.io.strata import build_strata, outside_area_cm2, read_strata_table
+from firnlight.run.contents import Contents
+from firnlight.run.store import Store
+from firnlight.stages.insolation import lattice_step
+
+STRATA_VERSION = 1
+
+
+@dataclass(frozen=True)
+class TileGround:
+    """The ground of one tile."""
+
+    longitude_deg: Lattice
+    latitude_deg: Lattice
+    area_cm2: Lattice
+    elevation: str | None
+    elevation_id: str
+    key: str  # of the strata: region, cover, band and ownership of every cell
+
+    @property
+    def centre_deg(self) -> tuple[float, float]:
+        """Longitude and latitude near the tile's centre."""
+        lon, lat = self.longitude_deg.values, self.latitude_deg.values
+        return float((lon[0, 0] + lon[-1, -1]) / 2), float((lat[0, 0] + lat[-1, -1]) / 2)
+
+
+class Ground:
+    """The ground of all tiles, worked out when first asked for."""
+
+    def __init__(self, workflow: Workflow, store: Store, grids: dict[str, Grid], contents: Contents) -> None:
+        self.workflow, self.store, self.grids, self.contents = workflow, store, grids, contents
+        self._tiles: dict[str, TileGround] = {}
+
+    def _path(self, written: str | None, tile: str, key: str) -> Path | None:
+        if written is None:
+            return None
+        path = self.workflow.tile_path(written, tile)
+        if not path.is_file():
+            raise InputProblem(str(self.workflow.file), key, f"no file {path}", "a raster for every tile", f"correct {key}")
+        return path
+
+    def of(self, tile: str) -> TileGround:
+        """The ground of a tile; files are named and fingerprinted, not read.
+
+        Raises
+        ------
+        InputProblem : a file named in the workflow is not there, or lies on another grid.
+        """
+        if tile not in self._tiles:
+            grid = self.grids[tile]
+            elevation = self._path(self.workflow.surface.elevation, tile, "surface.elevation")
+            land_cover = self._path(self.workflow.surface.land_cover, tile, "surface.land_cover")
+            for path in (elevation, land_cover):
+                difference = grid.difference(grid_of(str(path))) if path else None
+                if difference:
+                    raise InputProblem(
+                        str(path), "grid", difference, f"the grid of tile {tile}", "warp the raster to the tile's grid"
+                    )
+            step = lattice_step(places.cell_size_m(grid))
+            longitude, latitude = places.positions(grid, step)
+            elevation_id = self.contents.of(elevation) if elevation else ""
+            facts = [
+                STRATA_VERSION, self._regions_facts, elevation_id, self.contents.of(land_cover) if land_cover else "",
+                sorted(self.workflow.surface.class_names.items()),
+                [[name, _place(self.grids[name])] for name in (*neighbours(self.grids, tile),)], tile, _place(grid),
+            ]  # fmt: skip
+            self._tiles[tile] = TileGround(
+                longitude, latitude, places.areas(grid), str(elevation) if elevation else None, elevation_id,
+                text_id(json.dumps(facts)),
+            )  # fmt: skip
+        return self._tiles[tile]
+
+    @cached_property
+    def _regions_facts(self) -> list[object]:
+        settings = self.workflow.regions
+        bands = settings.elevation_bands
+        ident = self.contents.of(self.workflow.path(settings.file)) if settings.file else self.workflow.area.name
+        return [
+            ident, settings.layer, settings.id_field, settings.name_field, settings.parent_field,
+            [bands.from_m, bands.to_m, bands.step_m] if bands else None,
+        ]  # fmt: skip
+
+    @cached_property
+    def regions(self) -> Regions:
+        settings = self.workflow.regions
+        if settings.file is None:
+            return whole_area(self.workflow.area.name)
+        return read_regions(
+            self.workflow.path(settings.file), settings.layer, settings.id_field, settings.name_field, settings.parent_field
+        )
+
+    def prepare(self, tile: str) -> None:
+        """Build the strata of a tile where the store does not hold them yet."""
+        path, ground = self.store.strata(tile), self.of(tile)
+        if path.is_file():
+            try:
+                if read_strata_table(path).key == ground.key:
+                    return
+            except InputProblem:
+                pass  # damaged: build again
+        surface = self.workflow.surface
+        build_strata(
+            self.grids, tile, self.regions, ground.elevation,
+            str(self.workflow.tile_path(surface.land_cover, tile)) if surface.land_cover else None,
+            surface.class_names, self.workflow.regions.elevation_bands, path, ground.key,
+        )  # fmt: skip
+
+    def note_outside(self) -> None:
+        """Write down each region's ground outside every tile, unless the same is written already."""
+        path = outside_file(self.store)
+        facts = text_id(json.dumps([self._regions_facts, [[name, _place(grid)] for name, grid in self.grids.items()]]))
+        if path.is_file() and json.loads(path.read_text(encoding="utf-8")).get("key") == facts:
+            return
+        body = {
+            "key": facts, "cm2": outside_area_cm2(self.regions, self.grids),
+            "names": {one.id: one.name for one in self.regions.all}, "roots": self.regions.roots,
+        }  # fmt: skip
+        path.parent.mkdir(parents=True, exist_ok=True)
+        write_text(path, json.dumps(body, indent=1, ensure_ascii=False) + "\n")
+
+
+def _place(grid: Grid) -> list[object]:
+    return [grid.crs, list(grid.transform), list(grid.shape)]
+
+
+def outside_file(store: Store) -> Path:
+    return store.root / "terrain" / "regions.json"
+
+
+@dataclass(frozen=True)
+class StaticRow:
+    """Ground of a region with one land cover in one elevation band, whatever was seen of it."""
+
+    region: str
+    region_name: str
+    is_root: bool
+    land_cover: str
+    band_low_m: float | None
+    band_high_m: float | None
+    area_cm2: int
+
+
+def static_rows(store: Store) -> list[StaticRow]:
+    """All ground of the store's tiles by region, cover and band, with what lies outside every tile."""
+    rows = []
+    path = outside_file(store)
+    outside = json.loads(path.read_text(encoding="utf-8")) if path.is_file() else {"cm2": {}, "names": {}, "roots": []}
+    roots = set(outside["roots"])
+    for raster in sorted((store.root / "terrain").glob("*/strata.tif")):
+        table = read_strata_table(raster)
+        for stratum in table.strata:
+            for region in stratum.regions:
+                rows.append(
+                    StaticRow(
+                        region, table.region_names[region], region in roots, stratum.land_cover, stratum.band_low_m,
+                        stratum.band_high_m, stratum.area_cm2,
+                    )
+                )  # fmt: skip
+    rows += [
+        StaticRow(region, outside["names"][region], region in roots, "outside the tiles", None, None, area)
+        for region, area in outside["cm2"].items()
+        if area
+    ]
+    return rows
+
+

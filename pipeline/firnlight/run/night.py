@@ -1,0 +1,261 @@
+"""The main job, start to end: every due scene to maps and totals, once."""
+
+from __future__ import annotations
+
+import datetime as dt
+import errno
+import time
+import traceback
+from dataclasses import dataclass, field
+from pathlib import Path
+
+from firnlight.core.errors import InputProblem, NoRoom
+from firnlight.core.settings import Workflow, load_workflow
+from firnlight.io.atomic import sweep
+from firnlight.io.fingerprints import content_id
+from firnlight.io.items import read_product_item
+from firnlight.run.engine import engine, worker_count
+from firnlight.run.ledger import Ledger, Product, Refusal
+from firnlight.run.plan import Decision, Planner, Span
+from firnlight.run.progress import Listener, Step, silent
+from firnlight.run.store import ITEM, Store
+from firnlight.run.tile import Made, TileJob, job_call
+
+BYTES_PER_CELL = 2 * 22  # scratch and finished maps, uncompressed: what a tile-day may need at worst
+CELLS_PER_MINUTE = 5e8  # order of size on two cores, for the estimate only
+
+
+@dataclass
+class Outcome:
+    """What a night came to. found = made + already + refused + failed, in tile-days; refusals count inputs."""
+
+    store: Path
+    made: list[str] = field(default_factory=list)
+    already: list[str] = field(default_factory=list)
+    refusals: list[Refusal] = field(default_factory=list)
+    failed: dict[str, str] = field(default_factory=dict)
+    seconds: float = 0.0
+
+    @property
+    def exit_code(self) -> int:
+        return 3 if self.refusals or self.failed else 0
+
+    def sentence(self) -> str:
+        """The night in one sentence."""
+        if not self.made and not self.failed and not self.refusals:
+            return f"Nothing to do: {len(self.already)} tile-days are up to date."
+        parts = [f"{len(self.made)} tile-days made", f"{len(self.already)} already up to date"]
+        if self.refusals:
+            parts.append(f"{len(self.refusals)} inputs refused")
+        if self.failed:
+            parts.append(f"{len(self.failed)} tile-days failed")
+        return ", ".join(parts) + f", in {self.seconds:.1f} s."
+
+    def data(self) -> dict[str, object]:
+        return {
+            "version": 1, "store": str(self.store), "made": self.made, "already": self.already,
+            "refused": [{"input": one.subject, "reason": one.reason} for one in self.refusals],
+            "failed": self.failed, "seconds": round(self.seconds, 3), "exit_code": self.exit_code,
+        }  # fmt: skip
+
+
+def _now() -> str:
+    return dt.datetime.now(dt.UTC).isoformat(timespec="seconds")
+
+
+def plan_night(workflow: Workflow, span: Span) -> tuple[list[Decision], list[Refusal]]:
+    """What a night would do; reads inputs, writes nothing."""
+    store = Store(workflow.path(workflow.store.path))
+    ledger = Ledger(store.ledger, read_only=True)
+    try:
+        planner = Planner(workflow, store, ledger, worker_count(workflow.engine.workers))
+        decisions = [planner.decide(tile, day) for tile, day in planner.due(span)]
+        return decisions, planner.refusals
+    finally:
+        ledger.close()
+
+
+def run_night(
+    workflow: Workflow | Path | str, span: Span = Span(), cluster: str | None = None, wait: bool = False,  # noqa: B008
+    tell: Listener = silent, block: tuple[int, int] | None = None,
+) -> Outcome:  # fmt: skip
+    """Make every product that is due; a second run does nothing.
+
+    Parameters
+    ----------
+    workflow : settings, or the path of a workflow file.
+    span : acquisition dates and tiles asked for; all by default.
+    cluster : address of a dask scheduler, instead of the workflow's engine.
+    wait : wait for another run to end instead of refusing.
+    tell : hears of each finished tile-day.
+    block : rows and columns of a block of work; the results do not depend on it.
+
+    Raises
+    ------
+    SettingsProblem : the workflow cannot be used.
+    StoreBusy : another run holds the store.
+    NoRoom : the disk is too full to start, or was filled.
+    """
+    settings = workflow if isinstance(workflow, Workflow) else load_workflow(Path(workflow))
+    store = Store(settings.path(settings.store.path))
+    store.make()
+    with store.held(wait):
+        fresh = not store.ledger.exists()
+        ledger = Ledger(store.ledger)
+        try:
+            if fresh:
+                rebuild_ledger(store, ledger)
+            return _run(settings, store, ledger, span, cluster, tell, block)
+        finally:
+            ledger.close()
+
+
+def _run(
+    settings: Workflow, store: Store, ledger: Ledger, span: Span, cluster: str | None, tell: Listener,
+    block: tuple[int, int] | None,
+) -> Outcome:  # fmt: skip
+    begun, started = time.monotonic(), _now()
+    outcome = Outcome(store.root)
+    planner = Planner(settings, store, ledger, worker_count(settings.engine.workers))
+    due = planner.due(span)
+    jobs: dict[str, TileJob] = {}
+    for tile, day in due:
+        _take(planner.decide(tile, day), jobs, outcome, ledger, block)
+    planner.contents.keep()
+    ledger.record_refusals(planner.refusals, started, due)
+    if not jobs:
+        outcome.refusals = planner.refusals
+        outcome.seconds = time.monotonic() - begun
+        return outcome
+    sweep(store.root)
+    store.need_room(max(job.grid.rows * job.grid.cols for job in jobs.values()) * BYTES_PER_CELL)
+    for tile in sorted({job.tile for job in jobs.values()}):
+        planner.ground.prepare(tile)
+    planner.ground.note_outside()
+    run = ledger.start_run("night", started)
+    total, done = len(jobs), 0
+    with engine(settings.engine, cluster) as where:
+        while jobs:
+            again: dict[str, TileJob] = {}
+            for name, result in where.run({name: job_call(job) for name, job in jobs.items()}):
+                spoiled = _record(name, jobs[name], result, planner, ledger, outcome)
+                if spoiled is not None:
+                    left = planner.decide(spoiled.tile, spoiled.day)
+                    _take(left, again, outcome, ledger, block)
+                    if left.job is not None:
+                        continue
+                done += 1
+                last = "made" if name in outcome.made else "failed" if name in outcome.failed else "refused"
+                detail = outcome.failed.get(name, "").strip().splitlines()
+                seconds = time.monotonic() - begun
+                tell(Step(name, done, total, last, seconds, detail[-1] if detail else ""))
+            jobs = again
+    planner.contents.keep()
+    ledger.record_refusals(planner.refusals, started, due)
+    outcome.refusals = planner.refusals
+    outcome.seconds = time.monotonic() - begun
+    ledger.end_run(
+        run, _now(), len(outcome.made), len(outcome.already), len(outcome.refusals), len(outcome.failed), outcome.exit_code
+    )
+    return outcome
+
+
+def _take(
+    decision: Decision, jobs: dict[str, TileJob], outcome: Outcome, ledger: Ledger, block: tuple[int, int] | None
+) -> None:
+    name = f"{decision.tile} {decision.day.isoformat()}"
+    if decision.job is not None:
+        jobs[name] = decision.job if block is None else decision.job.with_block(block)
+    elif decision.what == "done":
+        outcome.already.append(name)
+        if decision.touched:
+            ledger.record_products(decision.touched)
+
+
+def _record(
+    name: str, job: TileJob, result: object, planner: Planner, ledger: Ledger, outcome: Outcome
+) -> TileJob | None:
+    """Write down how a job ended; the job again, where it must be planned without a spoiled scene."""
+    if isinstance(result, Made) and result.problem is None:
+        scenes = " ".join(scene.id for scene in job.scenes)
+        ledger.record(job.tile, job.day, result.products, scenes, _now(), result.seconds)
+        outcome.made.append(name)
+        return None
+    if isinstance(result, Made):
+        assert result.problem is not None
+        scene = next(scene for scene in planner.scenes[job.tile, job.day] if scene.id == result.scene)
+        planner.refuse(scene, result.problem)
+        return job
+    if isinstance(result, OSError) and result.errno in (errno.ENOSPC, errno.EDQUOT, errno.EFBIG):
+        raise NoRoom(
+            result.filename or str(planner.store.root), "free disk space", result.strerror or "none left",
+            "room for the maps", "make room, then run the same command: it goes on where it stopped",
+        ) from result  # fmt: skip
+    if isinstance(result, InputProblem):
+        planner.refusals.append(Refusal(name, str(result), job.day, job.tile))
+        return None
+    assert isinstance(result, Exception)
+    outcome.failed[name] = "".join(traceback.format_exception(result))
+    return None
+
+
+def rebuild_ledger(store: Store, ledger: Ledger) -> int:
+    """Fill an empty ledger from the items in the store; returns the number of products found whole.
+
+    A product whose size or bytes are not what its item says is left out, and so made again.
+    """
+    count = 0
+    for tile, day in store.tile_days():
+        path = store.product(tile, day, ITEM)
+        try:
+            item = read_product_item(path)
+        except InputProblem:
+            continue
+        found = []
+        for asset in item.assets:
+            if asset.path.is_file() and asset.path.stat().st_size == asset.size and content_id(asset.path) == asset.digest:
+                found.append(_product(store, tile, day, asset.name, asset.path.resolve(), asset.key, asset.digest))
+        found.append(_product(store, tile, day, ITEM, path.resolve(), item.key, content_id(path)))
+        ledger.record(tile, day, found, " ".join(item.scenes), "rebuilt", 0.0)
+        count += len(found)
+    return count
+
+
+def _product(store: Store, tile: str, day: dt.date, name: str, path: Path, key: str, digest: str) -> Product:
+    stat = path.stat()
+    relative = path.relative_to(store.root.resolve()).as_posix()
+    return Product(tile, day, name, relative, key, stat.st_size, stat.st_mtime_ns, digest)
+
+
+def plan_text(decisions: list[Decision], refusals: list[Refusal]) -> str:
+    """The plan as lines: what, why, and an estimate."""
+    lines = []
+    for one in decisions:
+        what = "make" if one.job is not None else one.what
+        lines.append(f"{one.day} {one.tile}: {what} ({one.reason})")
+    lines += [f"refuse: {one.reason}" for one in refusals]
+    estimate = plan_data(decisions, refusals)["estimate"]
+    assert isinstance(estimate, dict)
+    lines.append(
+        f"{estimate['tile_days']} tile-days with {estimate['scenes']} scenes to make: {estimate['read_gb']:.2f} GB to read, "
+        f"at most {estimate['write_gb']:.2f} GB to write, about {estimate['minutes']:.1f} minutes. Nothing was written."
+    )
+    return "\n".join(lines)
+
+
+def plan_data(decisions: list[Decision], refusals: list[Refusal]) -> dict[str, object]:
+    """The plan as data."""
+    jobs = [one.job for one in decisions if one.job is not None]
+    read = sum(size for job in jobs for _, size, _ in job.inputs)
+    cells = sum(job.grid.rows * job.grid.cols for job in jobs)
+    return {
+        "version": 1,
+        "decisions": [
+            {"tile": one.tile, "day": one.day.isoformat(), "what": one.what, "reason": one.reason} for one in decisions
+        ],
+        "refused": [{"input": one.subject, "reason": one.reason} for one in refusals],
+        "estimate": {
+            "tile_days": len(jobs), "scenes": sum(len(job.scenes) for job in jobs), "read_gb": read / 1e9,
+            "write_gb": cells * BYTES_PER_CELL / 2 / 1e9, "minutes": cells / CELLS_PER_MINUTE,
+        },
+    }  # fmt: skip
