@@ -148,8 +148,8 @@ def edit(folder, old, new):
         ("SUN_ELEVATION = ", "SUN_HEIGHT = ", "SUN_ELEVATION"),
         ("DATE_ACQUIRED = 2013-07-07", "DATE_ACQUIRED = 2013-07-08", "2013-07-08"),
         ('SENSOR_ID = "OLI_TIRS"', 'SENSOR_ID = "ETM"', "--sensor oli"),
-        ("END_GROUP = PRODUCT_METADATA", "END_GROUP = OTHER", "line 63"),
-        ("    STATION_ID = ", "    STATION_ID ", "line 8"),
+        ("END_GROUP = PRODUCT_METADATA", "END_GROUP = OTHER", "line 66"),
+        ("    STATION_ID = ", "    STATION_ID ", "line 9"),
         ("REFLECTANCE_MULT_BAND_4 = 2.0000E-05", "", "scale"),
         ("END_GROUP = L1_METADATA_FILE", "", "inside a group"),
     ],
@@ -212,7 +212,7 @@ END
 
 
 def test_a_level_2_text_scales_by_its_own_group_without_the_sun(tmp_path):
-    """Scale 0.0000275 and offset -0.2 of Collection 2 Level-2 (product guide, from memory); the rest is invented."""
+    """Scale 0.0000275, offset -0.2: Collection 2 Level-2 (product guide, from memory); the rest invented."""
     write_raster(tmp_path / "LC09_L2SP_001002_20310310_20310313_02_T1_SR_B3.TIF", numbers(), nodata=0)
     cells = np.zeros((ROWS, COLS), np.uint16)
     cells[0, :7] = [1, 1 << 3, 1 << 4, 1 << 5, 1 << 6, (1 << 1) | (1 << 6), 2 << 8]
@@ -239,9 +239,11 @@ def product_xml(baseline="05.10", offsets=True, level="2A"):
     name = "BOA_QUANTIFICATION_VALUE" if level == "2A" else "QUANTIFICATION_VALUE"
     return f"""<?xml version="1.0" encoding="UTF-8"?>
 <n1:Level-{level}_User_Product xmlns:n1="https://example.com/user_product.xsd"><n1:General_Info>
-<SPACECRAFT_NAME>Sentinel-2B</SPACECRAFT_NAME><PRODUCT_START_TIME>2031-03-10T14:20:31.024Z</PRODUCT_START_TIME>
+<SPACECRAFT_NAME>Sentinel-2B</SPACECRAFT_NAME>
+<PRODUCT_START_TIME>2031-03-10T14:20:31.024Z</PRODUCT_START_TIME>
 <PROCESSING_BASELINE>{baseline}</PROCESSING_BASELINE><{name} unit="none">10000</{name}>
-<Special_Values><SPECIAL_VALUE_TEXT>NODATA</SPECIAL_VALUE_TEXT><SPECIAL_VALUE_INDEX>0</SPECIAL_VALUE_INDEX></Special_Values>
+<Special_Values><SPECIAL_VALUE_TEXT>NODATA</SPECIAL_VALUE_TEXT>
+<SPECIAL_VALUE_INDEX>0</SPECIAL_VALUE_INDEX></Special_Values>
 <Special_Values><SPECIAL_VALUE_TEXT>SATURATED</SPECIAL_VALUE_TEXT>
 <SPECIAL_VALUE_INDEX>65535</SPECIAL_VALUE_INDEX></Special_Values>
 {listed if offsets else ""}</n1:General_Info></n1:Level-{level}_User_Product>"""
@@ -249,7 +251,8 @@ def product_xml(baseline="05.10", offsets=True, level="2A"):
 
 TILE_XML = """<n1:Level-2A_Tile_ID xmlns:n1="https://example.com/tile.xsd">
 <SENSING_TIME metadataLevel="Standard">2031-03-10T14:25:10.5Z</SENSING_TIME>
-<Mean_Sun_Angle><ZENITH_ANGLE unit="deg">50.5</ZENITH_ANGLE><AZIMUTH_ANGLE unit="deg">160.25</AZIMUTH_ANGLE></Mean_Sun_Angle>
+<Mean_Sun_Angle><ZENITH_ANGLE unit="deg">50.5</ZENITH_ANGLE>
+<AZIMUTH_ANGLE unit="deg">160.25</AZIMUTH_ANGLE></Mean_Sun_Angle>
 </n1:Level-2A_Tile_ID>"""
 
 

@@ -13,6 +13,7 @@ from firnlight.core.tables import load_table
 
 _PLACES = ("tile", "date", "band")
 _TILE = r"[A-Za-z0-9](?:[A-Za-z0-9.-]|_(?!_))*?"
+_TILE_BESIDE_STAR = r"[A-Za-z0-9][A-Za-z0-9.-]*?"  # with "_" in it, nobody could say where the star ends
 _DATE = r"\d{4}-\d\d-\d\dT\d\d:?\d\d:?\d\d|\d{8}T\d{6}|\d{4}-\d\d-\d\d|\d{8}|\d{7}"
 QUALITY = "quality"
 
@@ -54,7 +55,7 @@ def band_tags(sensor: str) -> dict[str, str]:
 def _expression(pattern: str, tags: dict[str, str]) -> re.Pattern[str]:
     known = ", ".join(f"{{{name}}}" for name in _PLACES)
     band = "|".join(re.escape(tag) for tag in sorted(tags, key=lambda tag: (-len(tag), tag)))
-    forms = {"tile": _TILE, "date": _DATE, "band": f"(?i:{band})"}
+    forms = {"tile": _TILE_BESIDE_STAR if "*" in pattern else _TILE, "date": _DATE, "band": f"(?i:{band})"}
     parts, seen = [], set()
     for piece in re.split(r"(\{[^{}]*\}|\*)", pattern):
         name = piece[1:-1]
@@ -99,9 +100,9 @@ def find_files(folder: Path, sensor: str, pattern: str) -> list[SceneFiles]:
 
     Parameters
     ----------
-    pattern : file name, or path below the folder where it holds "/", with {date} and {band}; "*" is anything.
-        {band} is a common name, the sensor's band number or its file tag ("red", "4", "04", "B4",
-        "B04"), or what names the quality file; upper or lower case.
+    pattern : file name, or path below the folder where it holds "/", with {date} and {band}; "*" is anything;
+        beside a "*", {tile} holds no "_". {band} is a common name, the sensor's band number or its file tag
+        ("red", "4", "04", "B4", "B04"), or what names the quality file; upper or lower case.
 
     Raises
     ------

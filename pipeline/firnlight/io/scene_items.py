@@ -279,22 +279,27 @@ def _number(told: float | str | None) -> float | None:
     return None if told is None else float(told)
 
 
-def _first(*told: Any) -> Any:
-    return next((one for one in told if one is not None), None)
-
-
 def _merged(asset: _Asset) -> list[_Facts]:
     """What is told of each band of an asset: by its `bands`, by the lists of STAC 1.0, else by the asset."""
-    count = max(len(asset.bands), len(asset.eo_bands), len(asset.raster_bands), 1)
-    names = list(_Facts.model_fields)
+    lists = [told for told in (asset.bands, asset.raster_bands, asset.eo_bands) if told]
+    common = _told(asset)
+    if not lists:
+        return [asset]
+    if len(lists) == 1 and not common:  # the usual item: nothing to merge, and there are many items
+        return lists[0]
     facts: list[_Facts] = []
-    for n in range(count):
-        levels = [told[n] for told in (asset.bands, asset.raster_bands, asset.eo_bands) if n < len(told)] + [
-            asset
-        ]
-        values = {name: _first(*(getattr(level, name) for level in levels)) for name in names}
+    for n in range(max(len(told) for told in lists)):
+        values = dict(common)
+        for told in reversed(lists):
+            values |= _told(told[n]) if n < len(told) else {}
         facts.append(_Facts.model_construct(**values))
     return facts
+
+
+def _told(facts: _Facts) -> dict[str, Any]:
+    """What is told of a band, without what is null."""
+    names = facts.model_fields_set & _Facts.model_fields.keys()
+    return {name: value for name in names if (value := getattr(facts, name)) is not None}
 
 
 def _flags(facts: _Facts) -> bytes:

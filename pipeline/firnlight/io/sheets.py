@@ -18,6 +18,7 @@ import pyarrow.parquet as pq
 
 from firnlight.core.errors import InputProblem, SettingsProblem
 from firnlight.core.totals import Totals
+from firnlight.io.regions import ALL
 from firnlight.io.atomic import move_into_place, replacing, scratch_path
 
 STATES = ("snow-free", "snow", "unseen")
@@ -63,6 +64,11 @@ def _schema(metadata: Mapping[str, str]) -> pa.Schema:
     return pa.schema(columns, metadata=dict(metadata))
 
 
+def stratum_regions(stratum: Any) -> tuple[str, ...]:
+    """Regions that a stratum counts for, and ALL: the ground of all regions together, each cell once."""
+    return stratum.regions if ALL in stratum.regions else (*stratum.regions, ALL)
+
+
 def region_rows(table: Any, totals: Sequence[Totals]) -> list[Row]:
     """Totals per stratum and state to rows per region, land cover, state and elevation band, sorted.
 
@@ -74,10 +80,10 @@ def region_rows(table: Any, totals: Sequence[Totals]) -> list[Row]:
             one = totals[number * 3 + state]
             if not (one.cells or one.unseen_cells):
                 continue
-            for region in stratum.regions:
+            for region in stratum_regions(stratum):
                 key = (region, stratum.land_cover, name, stratum.band_low_m, stratum.band_high_m)
                 sums[key] = sums[key] + one if key in sums else one
-    names = table.region_names
+    names = {ALL: "", **table.region_names}
     rows = [Row(k[0], names[k[0]], k[1], k[2], k[3], k[4], total) for k, total in sums.items()]  # type: ignore[arg-type, index]
     return sorted(rows, key=lambda row: row.order)
 

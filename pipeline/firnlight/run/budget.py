@@ -12,6 +12,7 @@ from firnlight.core.errors import SettingsProblem
 from firnlight.core.settings import Workflow
 from firnlight.core.totals import CM2_PER_KM2, Totals
 from firnlight.io.fingerprints import text_id
+from firnlight.io.regions import ALL
 from firnlight.io.sheets import DayTotals, read_totals
 from firnlight.run.ground import StaticRow, static_rows
 from firnlight.run.store import Store
@@ -109,7 +110,7 @@ def regional_budget(
 def _grouping(by: tuple[str, ...]) -> Callable[[str, str, float | None, float | None], _Group]:
     def group(region: str, cover: str, low: float | None, high: float | None) -> _Group:
         band = (low, high) if "elevation_band" in by else (None, None)
-        return region if "region" in by else "all", cover if "land_cover" in by else "all", *band
+        return region, cover if "land_cover" in by else "all", *band
 
     return group
 
@@ -121,10 +122,15 @@ def _period_rows(
     group = _grouping(by)
     count = (last - first).days + 1
     area: dict[_Group, int] = {}
-    names: dict[str, str] = {"all": workflow.area.name}
-    roots = {row.region for row in ground if row.is_root}
+    names: dict[str, str] = {ALL: workflow.area.name}
+    only_all = all(place.region == ALL for place in ground)
+
+    def wanted(region: str) -> bool:
+        """Regions may overlap, so without the key the rows of ALL are taken, where every cell counts once."""
+        return (region == ALL) == ("region" not in by or only_all)
+
     for place in ground:
-        if "region" not in by and place.region not in roots:
+        if not wanted(place.region):
             continue
         names.setdefault(place.region, place.region_name)
         key = group(place.region, place.land_cover, place.band_low_m, place.band_high_m)
@@ -134,7 +140,7 @@ def _period_rows(
     for day in days:
         keys.add(day.key)
         for row in day.rows:
-            if "region" not in by and row.region not in roots:
+            if not wanted(row.region):
                 continue
             key = group(row.region, row.land_cover, row.band_low_m, row.band_high_m)
             here = found.setdefault(key, _Ground())

@@ -9,7 +9,6 @@ from pathlib import Path
 
 from firnlight.core.errors import InputProblem
 from firnlight.core.grid import Grid
-from firnlight.core.lattice import Lattice
 from firnlight.core.settings import Workflow
 from firnlight.io import ground as places
 from firnlight.io.atomic import write_text
@@ -18,29 +17,21 @@ from firnlight.io.ownership import neighbours
 from firnlight.io.rasters import grid_of
 from firnlight.io.regions import Regions, read_regions, whole_area
 from firnlight.io.strata import build_strata, outside_area_cm2, read_strata_table
+from firnlight.io.sheets import stratum_regions
 from firnlight.run.contents import Contents
 from firnlight.run.store import Store
-from firnlight.stages.insolation import lattice_step
 
-STRATA_VERSION = 1
+STRATA_VERSION = 2
 
 
 @dataclass(frozen=True)
 class TileGround:
     """The ground of one tile."""
 
-    longitude_deg: Lattice
-    latitude_deg: Lattice
-    area_cm2: Lattice
+    centre_deg: tuple[float, float]  # longitude, latitude
     elevation: str | None
     elevation_id: str
     key: str  # of the strata: region, cover, band and ownership of every cell
-
-    @property
-    def centre_deg(self) -> tuple[float, float]:
-        """Longitude and latitude near the tile's centre."""
-        lon, lat = self.longitude_deg.values, self.latitude_deg.values
-        return float((lon[0, 0] + lon[-1, -1]) / 2), float((lat[0, 0] + lat[-1, -1]) / 2)
 
 
 class Ground:
@@ -49,6 +40,7 @@ class Ground:
     def __init__(self, workflow: Workflow, store: Store, grids: dict[str, Grid], contents: Contents) -> None:
         self.workflow, self.store, self.grids, self.contents = workflow, store, grids, contents
         self._tiles: dict[str, TileGround] = {}
+        self.warnings: list[str] = []
 
     def _path(self, written: str | None, tile: str, key: str) -> Path | None:
         if written is None:
@@ -75,17 +67,14 @@ class Ground:
                     raise InputProblem(
                         str(path), "grid", difference, f"the grid of tile {tile}", "warp the raster to the tile's grid"
                     )
-            step = lattice_step(places.cell_size_m(grid))
-            longitude, latitude = places.positions(grid, step)
             elevation_id = self.contents.of(elevation) if elevation else ""
             facts = [
                 STRATA_VERSION, self._regions_facts, elevation_id, self.contents.of(land_cover) if land_cover else "",
                 sorted(self.workflow.surface.class_names.items()),
-                [[name, _place(self.grids[name])] for name in (*neighbours(self.grids, tile),)], tile, _place(grid),
+                [[name, _place(self.grids[name])] for name in self.grids if name in {tile, *neighbours(self.grids, tile)}], tile,
             ]  # fmt: skip
             self._tiles[tile] = TileGround(
-                longitude, latitude, places.areas(grid), str(elevation) if elevation else None, elevation_id,
-                text_id(json.dumps(facts)),
+                places.centre_lonlat(grid), str(elevation) if elevation else None, elevation_id, text_id(json.dumps(facts))
             )  # fmt: skip
         return self._tiles[tile]
 
@@ -118,11 +107,12 @@ class Ground:
             except InputProblem:
                 pass  # damaged: build again
         surface = self.workflow.surface
-        build_strata(
+        table = build_strata(
             self.grids, tile, self.regions, ground.elevation,
             str(self.workflow.tile_path(surface.land_cover, tile)) if surface.land_cover else None,
             surface.class_names, self.workflow.regions.elevation_bands, path, ground.key,
         )  # fmt: skip
+        self.warnings += [f"{tile}: {warning}" for warning in table.warnings]
 
     def note_outside(self) -> None:
         """Write down each region's ground outside every tile, unless the same is written already."""
@@ -132,7 +122,7 @@ class Ground:
             return
         body = {
             "key": facts, "cm2": outside_area_cm2(self.regions, self.grids),
-            "names": {one.id: one.name for one in self.regions.all}, "roots": self.regions.roots,
+            "names": self.regions.names, "parents": self.regions.parents,
         }  # fmt: skip
         path.parent.mkdir(parents=True, exist_ok=True)
         write_text(path, json.dumps(body, indent=1, ensure_ascii=False) + "\n")
@@ -152,7 +142,6 @@ class StaticRow:
 
     region: str
     region_name: str
-    is_root: bool
     land_cover: str
     band_low_m: float | None
     band_high_m: float | None
@@ -163,23 +152,17 @@ def static_rows(store: Store) -> list[StaticRow]:
     """All ground of the store's tiles by region, cover and band, with what lies outside every tile."""
     rows = []
     path = outside_file(store)
-    outside = json.loads(path.read_text(encoding="utf-8")) if path.is_file() else {"cm2": {}, "names": {}, "roots": []}
-    roots = set(outside["roots"])
+    outside = json.loads(path.read_text(encoding="utf-8")) if path.is_file() else {"cm2": {}, "names": {}}
     for raster in sorted((store.root / "terrain").glob("*/strata.tif")):
         table = read_strata_table(raster)
         for stratum in table.strata:
-            for region in stratum.regions:
-                rows.append(
-                    StaticRow(
-                        region, table.region_names[region], region in roots, stratum.land_cover, stratum.band_low_m,
-                        stratum.band_high_m, stratum.area_cm2,
-                    )
-                )  # fmt: skip
+            for region in stratum_regions(stratum):
+                name = table.region_names.get(region, "")
+                edges = stratum.band_low_m, stratum.band_high_m
+                rows.append(StaticRow(region, name, stratum.land_cover, *edges, stratum.area_cm2))
     rows += [
-        StaticRow(region, outside["names"][region], region in roots, "outside the tiles", None, None, area)
+        StaticRow(region, outside["names"][region], "outside the tiles", None, None, area)
         for region, area in outside["cm2"].items()
         if area
     ]
     return rows
-
-

@@ -227,7 +227,6 @@ class Planner:
         stats = {path: os.stat(path) for path in sorted(paths)}
         job = TileJob(
             store=self.store, tile=tile, day=day, grid=self.ground.grids[tile], scenes=scenes, numbers=numbers,
-            longitude_deg=ground.longitude_deg, latitude_deg=ground.latitude_deg, area_cm2=ground.area_cm2,
             elevation=ground.elevation, insolation=self.workflow.insolation, keys=keys, stale=tuple(stale), kept=kept,
             inputs=tuple((path, s.st_size, s.st_mtime_ns) for path, s in stats.items()),
         )  # fmt: skip

@@ -22,6 +22,7 @@ from firnlight.io import sheets
 from firnlight.io.bands import SceneReader
 from firnlight.io.cog import CogWriter, Written, read_block
 from firnlight.io.fingerprints import content_id
+from firnlight.io.ground import areas, cell_areas_cm2, cell_size_m, positions
 from firnlight.io.items import Asset, product_item
 from firnlight.io.rasters import open_raster, read_window
 from firnlight.io.scenes import Scene
@@ -31,7 +32,7 @@ from firnlight.run.ledger import Product
 from firnlight.run.store import BUDGET, ITEM, Store
 from firnlight.stages import chain
 from firnlight.stages.albedo import AlbedoNumbers
-from firnlight.stages.insolation import sky_lattice
+from firnlight.stages.insolation import lattice_step, sky_lattice
 from firnlight.stages.summarise import Summary
 
 BLOCK_ROWS, BLOCK_COLS = 512, 2048  # whole tiles of the usual inputs and of our own maps
@@ -54,9 +55,6 @@ class TileJob:
     grid: Grid
     scenes: tuple[Scene, ...]
     numbers: tuple[AlbedoNumbers, ...]
-    longitude_deg: Lattice
-    latitude_deg: Lattice
-    area_cm2: Lattice
     elevation: str | None
     insolation: Insolation
     keys: dict[str, str]
@@ -101,10 +99,6 @@ class _SceneProblem(Exception):
         self.scene, self.problem = scene, problem
 
 
-def _cell_areas(lattice: Lattice, window: Window) -> Any:
-    return np.floor(lattice.at(window) + 0.5).astype(np.int64)
-
-
 def run_tile_day(job: TileJob, threads: int) -> Made:
     """Make the stale products of a tile-day and put them in place, all or none.
 
@@ -128,7 +122,8 @@ def _make(job: TileJob, threads: int) -> list[Product]:
     summary = Summary(len(table.strata), relative_u, chain.FLAG_BITS) if BUDGET in job.stale else None
     sources = _Sources(job)
     times = tuple(scene.datetime.timestamp() for scene in job.scenes)
-    sky = None if from_maps else sky_lattice(job.day, times, job.longitude_deg, job.latitude_deg, job.insolation)
+    sky = None if from_maps else sky_lattice(job.day, times, *_positions(job.grid), job.insolation)
+    area = areas(job.grid)
     scales = [
         (np.array([s.bands[b].scale for b in n.bands]), np.array([s.bands[b].offset for b in n.bands]))
         for s, n in zip(job.scenes, job.numbers, strict=True)
@@ -174,7 +169,7 @@ def _make(job: TileJob, threads: int) -> list[Product]:
             writer.write(window, blocks[name])
         if summary is not None:
             strata = read_window(sources.strata, window)
-            summary.add(strata, _cell_areas(job.area_cm2, window), blocks)
+            summary.add(strata, cell_areas_cm2(area, window), blocks)
 
     try:
         finishers: dict[str, Any] = {name: writer.finish for name, writer in writers.items()}
@@ -188,6 +183,10 @@ def _make(job: TileJob, threads: int) -> list[Product]:
     finally:
         for writer in writers.values():
             writer.discard()
+
+
+def _positions(grid: Grid) -> tuple[Lattice, Lattice]:
+    return positions(grid, lattice_step(cell_size_m(grid)))
 
 
 def _elevation(dataset: Any, window: Window) -> Any:
@@ -253,10 +252,10 @@ def write_item(job: TileJob, products: list[Product]) -> None:
     ]
     rows, cols = job.grid.shape
     corners = [(rows - 1, 0), (rows - 1, cols - 1), (0, cols - 1), (0, 0)]
-    outline = [
-        (round(float(job.longitude_deg.at(Window(r, c, 1, 1))[0, 0]), 6), round(float(job.latitude_deg.at(Window(r, c, 1, 1))[0, 0]), 6))
-        for r, c in corners
-    ]  # fmt: skip
+    outline = []
+    for r, c in corners:
+        lon, lat = (float(lattice.at(Window(r, c, 1, 1))[0, 0]) for lattice in _positions(job.grid))
+        outline.append((round(lon, 6), round(lat, 6)))
     product_item(
         job.store.product(job.tile, job.day, ITEM), job.tile, job.day, job.grid, outline, job.keys[ITEM], assets,
         {scene.id: scene.item_path for scene in job.scenes}, {stage.name: stage.version for stage in chain.STAGES},
