@@ -212,7 +212,7 @@ def budget(
     from firnlight.core.settings import load_workflow
     from firnlight.io.sheets import answer_bytes, write_answer
     from firnlight.report.numbers import budget_table
-    from firnlight.run.budget import UNITS, key_names, regional_budget
+    from firnlight.run.budget import CAUTIONS, UNITS, key_names, regional_budget
     from firnlight.run.store import Store
 
     settings = load_workflow(workflow)
@@ -239,7 +239,7 @@ def budget(
     if not quiet and not as_json:
         states = " and ".join(sorted({str(row["state"]) for row in answer.rows}))
         click.echo(f"{answer.area}, {answer.since} to {answer.until}, {states} as of {answer.as_of}.", err=True)
-        click.echo(f"Caution: {answer.cautions[1]}", err=True)
+        click.echo(f"Caution: {CAUTIONS[1]}", err=True)
         _next(f"firnlight budget {workflow} --out budget.csv" if out is None else "firnlight methods", quiet)
     return 0
 

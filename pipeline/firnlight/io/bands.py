@@ -112,7 +112,7 @@ class SceneReader:
             return cells
         numbers = cells.astype(np.float64)
         if source.nodata is not None:
-            numbers[cells == np.asarray(source.nodata).astype(cells.dtype)] = math.nan
+            pass
         n = source.ratio
         if n > 1:
             # one fixed order of sums: no cutting into windows changes a bit; one empty cell empties the mean
