@@ -83,3 +83,56 @@ def make_scene(folder: Path, body=None, **rasters):
     for seed, name in enumerate(BANDS):
         write_raster(folder / f"{name}.tif", rasters.get(name, numbers(seed=seed)))
     return write_item(folder / "item.json", body or item_body())
+
+
+def bit(name, offset):
+    classes = [{"value": 0, "name": f"not_{name}"}, {"value": 1, "name": name}]
+    return {"name": name, "offset": offset, "length": 1, "classes": classes}
+
+
+CONFIDENCE = [{"value": n, "name": word} for n, word in enumerate(("not_set", "low", "medium", "high"))]
+CLOUD_BITS = {
+    "href": "quality.tif",
+    "bands": [{"data_type": "uint8"}],
+    "classification:bitfields": [
+        bit("fill", 0),
+        bit("Cloud-Shadow", 1),
+        bit("snow", 2),
+        bit("saturated", 3),
+        {"name": "cloud_confidence", "offset": 4, "length": 2, "classes": CONFIDENCE},
+    ],
+}
+CLASS_NAMES = (
+    "no_data",
+    "saturated_or_defective",
+    "dark_area",
+    "cloud_shadow",
+    "vegetation",
+    "not_vegetated",
+    "water",
+    "unclassified",
+    "cloud_medium_probability",
+    "cloud_high_probability",
+    "thin_cirrus",
+    "Snow / Ice",
+)
+SCENE_CLASSES = {
+    "href": "classes.tif",
+    "bands": [{"classification:classes": [{"value": n, "name": word} for n, word in enumerate(CLASS_NAMES)]}],
+}
+
+
+def product_xml(baseline="05.10", offsets=True, level="2A"):
+    word = "BOA" if level == "2A" else "RADIO"
+    listed = "".join(f'<{word}_ADD_OFFSET band_id="{n}">{-1000 - n}</{word}_ADD_OFFSET>' for n in range(13))
+    name = "BOA_QUANTIFICATION_VALUE" if level == "2A" else "QUANTIFICATION_VALUE"
+    return f"""<?xml version="1.0" encoding="UTF-8"?>
+<n1:Level-{level}_User_Product xmlns:n1="https://example.com/user_product.xsd"><n1:General_Info>
+<SPACECRAFT_NAME>Sentinel-2B</SPACECRAFT_NAME>
+<PRODUCT_START_TIME>2031-03-10T14:20:31.024Z</PRODUCT_START_TIME>
+<PROCESSING_BASELINE>{baseline}</PROCESSING_BASELINE><{name} unit="none">10000</{name}>
+<Special_Values><SPECIAL_VALUE_TEXT>NODATA</SPECIAL_VALUE_TEXT>
+<SPECIAL_VALUE_INDEX>0</SPECIAL_VALUE_INDEX></Special_Values>
+<Special_Values><SPECIAL_VALUE_TEXT>SATURATED</SPECIAL_VALUE_TEXT>
+<SPECIAL_VALUE_INDEX>65535</SPECIAL_VALUE_INDEX></Special_Values>
+{listed if offsets else ""}</n1:General_Info></n1:Level-{level}_User_Product>"""

@@ -85,7 +85,13 @@ def commands() -> None:
     """
 
 
-def _span(workflow: Any, on: dt.datetime | None, since: dt.datetime | None, until: dt.datetime | None, tile: tuple[str, ...]) -> Span:
+def _span(
+    workflow: Any,
+    on: dt.datetime | None,
+    since: dt.datetime | None,
+    until: dt.datetime | None,
+    tile: tuple[str, ...],
+) -> Span:
     from firnlight.run.plan import Span
 
     if on and (since or until):
@@ -95,13 +101,19 @@ def _span(workflow: Any, on: dt.datetime | None, since: dt.datetime | None, unti
         last = on.date()
         first = last - dt.timedelta(days=workflow.scenes.look_back_days)
     if first and last and first > last:
-        raise SettingsProblem("--since", "dates", f"{first} after {last}", "a first day before the last", "exchange the dates")
+        raise SettingsProblem(
+            "--since", "dates", f"{first} after {last}", "a first day before the last", "exchange the dates"
+        )
     return Span(first, last, _list(tile))
 
 
 @commands.command()
 @_workflow
-@click.option("--on", type=DATE, help="Acquisition date of the night; scenes inside the look-back window before it are picked up too.")
+@click.option(
+    "--on",
+    type=DATE,
+    help="Acquisition date of the night; scenes inside the look-back window before it are picked up too.",
+)
 @_days
 @click.option("--tile", multiple=True, help="Only this tile; may be repeated.")
 @click.option("--dry-run", is_flag=True, help="Print what would be done and why; write nothing.")
@@ -187,8 +199,17 @@ def status(workflow: Path, failed: bool, waiting: bool, as_json: bool) -> int:
 @_workflow
 @_days
 @click.option("--year", type=int, help="Hydrological year, named by the calendar year it ends in.")
-@click.option("--by", default="region,elevation_band,land_cover,snow", show_default=True, help="Keys of the rows, comma list.")
-@click.option("--every", type=click.Choice(["day", "week", "month", "year"]), help="One set of rows per period; default the whole span.")
+@click.option(
+    "--by",
+    default="region,elevation_band,land_cover,snow",
+    show_default=True,
+    help="Keys of the rows, comma list.",
+)
+@click.option(
+    "--every",
+    type=click.Choice(["day", "week", "month", "year"]),
+    help="One set of rows per period; default the whole span.",
+)
 @click.option("--as-of", type=DATE, help="Day on which rows are called provisional or final; default today.")
 @click.option("--out", type=click.Path(path_type=Path, dir_okay=False), help="File ending in .csv, .parquet or .json.")
 @_as_json
@@ -224,7 +245,9 @@ def budget(
         if not quiet:
             click.echo(f"Hydrological year {year}: {first} to {last}.", err=True)
     if out is not None and out.suffix.lower() not in (".csv", ".parquet", ".json"):
-        raise SettingsProblem("--out", "file ending", out.suffix or "none", ".csv, .parquet or .json", "end the file name so")
+        raise SettingsProblem(
+            "--out", "file ending", out.suffix or "none", ".csv, .parquet or .json", "end the file name so"
+        )
     keys = key_names(by)
     today = _day(as_of) or dt.datetime.now(dt.UTC).date()
     answer = regional_budget(settings, Store(settings.path(settings.store.path)), first, last, keys, every, today)
@@ -278,13 +301,21 @@ def check(workflow: Path, as_json: bool, quiet: bool) -> int:
 @click.argument("folder", type=click.Path(path_type=Path))
 @click.option("--sensor", required=True, help="One of the sensors of `firnlight methods`.")
 @click.option("--pattern", required=True, help='File names, such as "{tile}_{date}_{band}.tif".')
-@click.option("--out", type=click.Path(path_type=Path, file_okay=False), help="Folder for the items; default beside the rasters.")
+@click.option(
+    "--out",
+    type=click.Path(path_type=Path, file_okay=False),
+    help="Folder for the items; default beside the rasters.",
+)
 @click.option("--reflectance", type=click.Choice(["surface", "top of atmosphere"]), default="surface", show_default=True,
-              help="What the numbers are: Level-1 files hold top-of-atmosphere reflectance, which is not surface reflectance.")  # fmt: skip
+              help="What the numbers are; Level-1 files hold top-of-atmosphere reflectance.")  # fmt: skip
 @click.option("--scale", type=float, help="Reflectance per stored number, where no metadata tells it.")
 @click.option("--offset", type=float, help="Reflectance of stored number 0, where no metadata tells it.")
 @click.option("--nodata", type=float, help="Stored number of an empty cell, where no metadata tells it.")
-@click.option("--time", "time_utc", help="Time of day of the acquisitions, UTC, as HH:MM:SS, where no metadata tells it.")
+@click.option(
+    "--time",
+    "time_utc",
+    help="Time of day of the acquisitions, UTC, as HH:MM:SS, where no metadata tells it.",
+)
 @_quiet
 def describe(
     folder: Path, sensor: str, pattern: str, out: Path | None, reflectance: str, scale: float | None, offset: float | None,
@@ -302,7 +333,15 @@ def describe(
     from firnlight.io.describe import describe as write_items
 
     written = write_items(
-        folder, sensor, pattern, out=out, reflectance=reflectance, scale=scale, offset=offset, nodata=nodata, time=time_utc
+        folder,
+        sensor,
+        pattern,
+        out=out,
+        reflectance=reflectance,
+        scale=scale,
+        offset=offset,
+        nodata=nodata,
+        time=time_utc,
     )
     for path in written:
         click.echo(str(path))
@@ -337,7 +376,13 @@ def methods(name: str | None, as_json: bool) -> int:
 @commands.command()
 @click.argument("folder", type=click.Path(path_type=Path))
 @click.option("--tiles", type=click.IntRange(1, 400), default=2, show_default=True, help="Number of tiles.")
-@click.option("--size", type=click.IntRange(16, 21960), default=256, show_default=True, help="Rows and columns of a tile, 30 m cells.")
+@click.option(
+    "--size",
+    type=click.IntRange(16, 21960),
+    default=256,
+    show_default=True,
+    help="Rows and columns of a tile, 30 m cells.",
+)
 @click.option("--scenes", type=click.IntRange(1, 400), default=3, show_default=True, help="Acquisition dates per year.")
 @click.option("--years", type=click.IntRange(1, 50), default=1, show_default=True, help="Hydrological years.")
 @click.option("--seed", type=int, default=7, show_default=True, help="Seed of all that is random.")
@@ -387,7 +432,7 @@ def main(arguments: list[str] | None = None) -> int:
     except (KeyboardInterrupt, click.Abort):
         return _say("stopped; the same command goes on where it stopped", 130)
     except BrokenPipeError:
-        sys.stdout = None  # type: ignore[assignment]
+        sys.stdout = None
         return 0
 
 

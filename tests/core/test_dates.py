@@ -1,6 +1,7 @@
 """Are hydrological years and periods cut right at their edges?"""
 
 import datetime as dt
+from itertools import pairwise
 
 import pytest
 from hypothesis import given
@@ -34,12 +35,10 @@ def test_periods_cover_the_span_without_gap_or_overlap(since, length, every, sta
     assert cut[0][0] == since
     assert cut[-1][1] == until
     assert all(first <= last for first, last in cut)
-    assert all(b[0] == a[1] + DAY for a, b in zip(cut, cut[1:], strict=False))
+    assert all(b[0] == a[1] + DAY for a, b in pairwise(cut))
 
 
-@pytest.mark.parametrize(
-    ("every", "count"), [("day", 366), ("month", 12), ("year", 2), ("week", 53), (None, 1)], ids=str
-)
+@pytest.mark.parametrize(("every", "count"), [("day", 366), ("month", 12), ("year", 2), ("week", 53), (None, 1)], ids=str)
 def test_a_leap_year_has_the_periods_one_counts_by_hand(every, count):
     cut = list(periods(dt.date(2028, 1, 1), dt.date(2028, 12, 31), every, "10-01"))
     assert len(cut) == count

@@ -57,5 +57,11 @@ def test_percentiles_lie_in_their_bins():
 
 def test_nothing_seen_is_nan_and_not_zero():
     nothing = Totals(unseen_cells=3, unseen_area=CM2_PER_KM2)
-    values = (nothing.albedo_ratio, nothing.albedo_u, nothing.absorbed_wm2, nothing.absorbed_u, nothing.albedo_percentile(0.5))
+    values = (
+        nothing.albedo_ratio,
+        nothing.albedo_u,
+        nothing.absorbed_wm2,
+        nothing.absorbed_u,
+        nothing.albedo_percentile(0.5),
+    )
     assert all(math.isnan(value) for value in values)

@@ -35,18 +35,12 @@ def read(path):
 
 
 def contents(folder):
-    return {
-        path.relative_to(folder).as_posix(): path.read_bytes()
-        for path in sorted(folder.rglob("*"))
-        if path.is_file()
-    }
+    return {path.relative_to(folder).as_posix(): path.read_bytes() for path in sorted(folder.rglob("*")) if path.is_file()}
 
 
 def overpasses(area, scenes, seed, years=1):
     around = layout.extent(area)
-    return [
-        Overpass(n, sky.overpass(t, seed), around) for n, t in enumerate(layout.overpasses(scenes, years))
-    ]
+    return [Overpass(n, sky.overpass(t, seed), around) for n, t in enumerate(layout.overpasses(scenes, years))]
 
 
 def scenes_of(folder):
@@ -229,9 +223,7 @@ def test_the_truth_is_recovered_from_clear_cells(made):
     for scene in scenes_of(made):
         bands = reflectance(made, scene)
         got = sum(w * bands[b] for b, w in form["weights"].items()) + form["intercept"]
-        clear = (read(made / f"truth/{scene}/cloud.tif") & 3 == 0) & (
-            read(made / f"scenes/{scene}/nir.tif") > 0
-        )
+        clear = (read(made / f"truth/{scene}/cloud.tif") & 3 == 0) & (read(made / f"scenes/{scene}/nir.tif") > 0)
         error = (got - read(made / f"truth/{scene}/albedo.tif") * 1e-4)[clear]
         assert abs(error.mean()) <= 0.01
         assert np.sqrt((error**2).mean()) <= 0.02
@@ -282,9 +274,7 @@ def test_insolation_is_the_clear_sky_model_and_absorption_closes(made):
         for row, col in rng.integers(0, 192, (6, 2)):
             x, y = rasterio.transform.xy(transform, row, col)
             lon, lat = Transformer.from_crs(crs, 4326, always_xy=True).transform(x, y)
-            moments = day_moments(
-                day, np.array([lat]), np.array([lon]), np.array([float(height[row, col])]), air(), 8
-            )
+            moments = day_moments(day, np.array([lat]), np.array([lon]), np.array([float(height[row, col])]), air(), 8)
             wanted = day_mean_insolation(moments[0, 0], albedo[row, col] * 1e-4)
             # half a stored step, and what the fit and the heights' eighths of a metre leave
             assert incoming[row, col] * 0.1 == pytest.approx(float(wanted), abs=0.05 + 0.03)

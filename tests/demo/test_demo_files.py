@@ -69,9 +69,7 @@ def test_regions_are_nested_and_the_parts_add_up(made):
     assert shapely.union_all(parts).symmetric_difference(shapes["morrowfell"]).area < 1e-12
     assert meta["crs"] == "EPSG:4326"
     for tile in layout.tiles(2, 192):
-        lon, lat = Transformer.from_crs(tile.grid.crs, 4326, always_xy=True).transform(
-            *layout.corners(tile.grid)
-        )
+        lon, lat = Transformer.from_crs(tile.grid.crs, 4326, always_xy=True).transform(*layout.corners(tile.grid))
         outline = shapely.Polygon(np.column_stack([lon, lat]))
         assert shapes["high_traverse"].intersection(outline).area > 0
         assert sum(part.intersects(outline) for part in parts) >= 2
@@ -97,9 +95,7 @@ def test_weather_and_station_are_plausible_and_say_their_units(made):
         assert float(flux.min()) == 0
         assert 900 < float(flux.max()) < 1361
         assert (flux.sel(time="2031-05-14T02:00") == 0).all()  # local midnight
-    rows = np.genfromtxt(
-        made / "stations/high_camp.csv", delimiter=",", names=True, dtype=None, encoding="utf-8"
-    )
+    rows = np.genfromtxt(made / "stations/high_camp.csv", delimiter=",", names=True, dtype=None, encoding="utf-8")
     assert rows.size == 3 * 3 * 48
     assert (rows["sw_up_wm2"] <= rows["sw_down_wm2"]).all()
     assert ((rows["lw_down_wm2"] > 120) & (rows["lw_down_wm2"] < 420)).all()

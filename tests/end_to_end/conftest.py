@@ -20,7 +20,12 @@ class Area:
     """A demo area that a test may spoil: its folder, its workflow, and the commands."""
 
     def __init__(self, folder: Path, capsys) -> None:
-        self.folder, self.workflow, self.store, self._capsys = folder, folder / "workflow.toml", folder / "store", capsys
+        self.folder, self.workflow, self.store, self._capsys = (
+            folder,
+            folder / "workflow.toml",
+            folder / "store",
+            capsys,
+        )
 
     def run(self, *arguments: str) -> tuple[int, str, str]:
         """Run a command on the workflow; exit code, stdout, stderr."""

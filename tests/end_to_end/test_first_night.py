@@ -34,7 +34,10 @@ def test_every_scene_becomes_all_layers_and_totals(area):
     assert "Next: firnlight budget" in err
     assert len(days(area)) == 4
     for folder in days(area):
-        assert {path.name for path in folder.iterdir()} == {*(f"{n}.tif" for n in layer_names()), "scene.json"}
+        assert {path.name for path in folder.iterdir()} == {
+            *(f"{n}.tif" for n in layer_names()),
+            "scene.json",
+        }
     assert len(list((area.store / "budget").rglob("*.parquet"))) == 4
     assert not list(area.store.rglob(".*.part.*"))
 
@@ -70,9 +73,7 @@ def test_items_are_stac_and_lead_back_to_the_scenes(done_area):
 def test_incoming_is_reflected_plus_absorbed_in_every_cell(done_area):
     for folder in days(done_area):
         maps = maps_of(folder)
-        incoming, absorbed, albedo = (
-            maps[n].astype(np.int64) for n in ("insolation", "absorbed_shortwave", "albedo")
-        )
+        incoming, absorbed, albedo = (maps[n].astype(np.int64) for n in ("insolation", "absorbed_shortwave", "albedo"))
         seen = incoming != FILL
         assert seen.any()
         assert ((absorbed != FILL) == seen).all()

@@ -7,7 +7,8 @@ import pytest
 import rasterio
 
 ALL = {
-    "albedo", "albedo_u", "insolation", "absorbed_shortwave", "absorbed_shortwave_u", "snow_fraction", "quality", "budget", "item",
+    "albedo", "albedo_u", "insolation", "absorbed_shortwave", "absorbed_shortwave_u", "snow_fraction", "quality",
+    "budget", "item",
 }  # fmt: skip
 
 
@@ -55,10 +56,22 @@ def test_an_edited_map_is_noticed_and_remade(done_area):
 @pytest.mark.parametrize(
     ("old", "new", "remade"),
     [
-        ("aerosol_500nm = ", "aerosol_500nm = 0.0", {"insolation", "absorbed_shortwave", "absorbed_shortwave_u", "budget", "item"}),
+        (
+            "aerosol_500nm = 0.1",
+            "aerosol_500nm = 0.05",
+            {"insolation", "absorbed_shortwave", "absorbed_shortwave_u", "budget", "item"},
+        ),
         ("step = 200", "step = 400", {"budget", "item", "terrain"}),
-        ('snow_fraction = "gascoin_2020"', 'snow_fraction = "salomonson_appel_2004"', {"snow_fraction", "budget", "item"}),
-        ("[insolation]", "[insolation]\nrelative_uncertainty = 0.1", {"absorbed_shortwave_u", "budget", "item"}),
+        (
+            'snow_fraction = "gascoin_2020"',
+            'snow_fraction = "salomonson_appel_2004"',
+            {"snow_fraction", "budget", "item"},
+        ),
+        (
+            "[insolation]",
+            "[insolation]\nrelative_uncertainty = 0.1",
+            {"absorbed_shortwave_u", "budget", "item"},
+        ),
         ('snow = "liang2001"', 'snow = "knap1999"', ALL),
         ("[store]", "[store]\nfinal_after_days = 3", set()),
         ("workers = ", "workers = 1 #", set()),

@@ -14,13 +14,10 @@ import rasterio
 
 from firnlight.core.errors import InputProblem
 from firnlight.core.layers import flag_bit
-from firnlight.core.tables import load_table
 from firnlight.io.bands import SceneReader
 from firnlight.io.describe import describe
-from firnlight.io.metadata_text import read_group_text, read_groups, read_xml_text
-from firnlight.io.quality import word_flags
 from firnlight.io.scenes import find_scenes, open_scene
-from scene_maker import CELL, COLS, CRS, ROWS, numbers, write_raster
+from scene_maker import CELL, COLS, CRS, ROWS, numbers, product_xml, write_raster
 
 CLIP = Path(__file__).parents[1] / "reference" / "landsat8_clip"
 CLIP_PATTERN = "*_{tile}_{date}_*_{band}.TIF"
@@ -233,22 +230,6 @@ def test_a_level_2_text_scales_by_its_own_group_without_the_sun(tmp_path):
 # XML texts
 
 
-def product_xml(baseline="05.10", offsets=True, level="2A"):
-    word = "BOA" if level == "2A" else "RADIO"
-    listed = "".join(f'<{word}_ADD_OFFSET band_id="{n}">{-1000 - n}</{word}_ADD_OFFSET>' for n in range(13))
-    name = "BOA_QUANTIFICATION_VALUE" if level == "2A" else "QUANTIFICATION_VALUE"
-    return f"""<?xml version="1.0" encoding="UTF-8"?>
-<n1:Level-{level}_User_Product xmlns:n1="https://example.com/user_product.xsd"><n1:General_Info>
-<SPACECRAFT_NAME>Sentinel-2B</SPACECRAFT_NAME>
-<PRODUCT_START_TIME>2031-03-10T14:20:31.024Z</PRODUCT_START_TIME>
-<PROCESSING_BASELINE>{baseline}</PROCESSING_BASELINE><{name} unit="none">10000</{name}>
-<Special_Values><SPECIAL_VALUE_TEXT>NODATA</SPECIAL_VALUE_TEXT>
-<SPECIAL_VALUE_INDEX>0</SPECIAL_VALUE_INDEX></Special_Values>
-<Special_Values><SPECIAL_VALUE_TEXT>SATURATED</SPECIAL_VALUE_TEXT>
-<SPECIAL_VALUE_INDEX>65535</SPECIAL_VALUE_INDEX></Special_Values>
-{listed if offsets else ""}</n1:General_Info></n1:Level-{level}_User_Product>"""
-
-
 TILE_XML = """<n1:Level-2A_Tile_ID xmlns:n1="https://example.com/tile.xsd">
 <SENSING_TIME metadataLevel="Standard">2031-03-10T14:25:10.5Z</SENSING_TIME>
 <Mean_Sun_Angle><ZENITH_ANGLE unit="deg">50.5</ZENITH_ANGLE>
@@ -261,9 +242,7 @@ def msi(tmp_path):
     """A product folder: 20 m bands, one 10 m band, classes, and both texts above them."""
     for band in ("B03", "B8A", "B11"):
         write_raster(tmp_path / "p/R20m" / f"T01ABC_20310310T142031_{band}_20m.tif", numbers())
-    write_raster(
-        tmp_path / "p/R10m" / "T01ABC_20310310T142031_B04_10m.tif", numbers(ROWS * 2, COLS * 2), cell=CELL / 2
-    )
+    write_raster(tmp_path / "p/R10m" / "T01ABC_20310310T142031_B04_10m.tif", numbers(ROWS * 2, COLS * 2), cell=CELL / 2)
     cells = np.full((ROWS, COLS), 11, np.uint8)
     cells[0, 0] = 9
     write_raster(tmp_path / "p/R20m" / "T01ABC_20310310T142031_SCL_20m.tif", cells)
@@ -288,61 +267,6 @@ def test_offsets_of_each_band_are_read_and_never_guessed_from_the_date(msi):
     assert (scene.platform, scene.version, scene.tile) == ("sentinel-2b", "05.10", "T01ABC")
     flags = SceneReader(scene, ("green",)).read(scene.grid.whole)[2]
     assert flags[0, :2].tolist() == [flag_bit("cloud"), flag_bit("snow")]
-
-
-@pytest.mark.parametrize(
-    ("baseline", "known"), [("02.13", True), ("03.01", True), ("04.00", False), ("05.10", False), ("", False)]
-)
-def test_offsets_are_zero_only_before_they_were_introduced(tmp_path, baseline, known):
-    path = tmp_path / "MTD_MSIL2A.xml"
-    path.write_text(product_xml(baseline, offsets=False), encoding="utf-8")
-    if known:
-        assert read_xml_text(path).scaling("08") == (0.0001, 0.0)
-    else:
-        with pytest.raises(InputProblem, match="BOA_ADD_OFFSET"):
-            read_xml_text(path)
-
-
-def test_level_1c_reflectance_needs_no_sine(tmp_path):
-    path = tmp_path / "MTD_MSIL1C.xml"
-    path.write_text(product_xml(level="1C"), encoding="utf-8")
-    text = read_xml_text(path)
-    assert text.level == 1
-    assert text.scaling("12") == (0.0001, -0.1012)
-
-
-BOMB = '<!DOCTYPE a [<!ENTITY b "bbbbbbbbbb"><!ENTITY c "&b;&b;&b;&b;&b;&b;&b;&b;">]><a>&c;</a>'
-
-
-@pytest.mark.parametrize(
-    "text",
-    [
-        BOMB,
-        '<!DOCTYPE a SYSTEM "file:///etc/passwd"><a/>',
-        "<! doctype a><a/>",
-        "<a><b></a>",
-        "",
-        "<a>\0</a>",
-    ],
-    ids=["entities", "outside", "lower case", "not closed", "empty", "empty byte"],
-)
-def test_xml_with_entities_or_damage_is_refused(tmp_path, text):
-    path = tmp_path / "MTD_MSIL2A.xml"
-    path.write_text(text, encoding="utf-8")
-    with pytest.raises(InputProblem):
-        read_xml_text(path)
-    path.write_bytes(BOMB.encode("utf-16"))
-    with pytest.raises(InputProblem, match="no text"):
-        read_xml_text(path)
-
-
-def test_a_text_of_groups_keeps_equal_keys_apart():
-    groups = read_groups(next(CLIP.glob("*_MTL.txt")))
-    assert groups["PRODUCT_METADATA"]["SENSOR_ID"] == "OLI_TIRS"
-    assert groups["MIN_MAX_PIXEL_VALUE"]["QUANTIZE_CAL_MIN_BAND_2"] == "1"
-    text = read_group_text(next(CLIP.glob("*_MTL.txt")))
-    assert (text.level, text.scale["2"], text.offset["2"]) == (1, 2e-05, -0.1)
-    assert set(text.scale) == set("123456789")
 
 
 # plain folders
@@ -443,17 +367,3 @@ def test_two_texts_in_one_folder_are_told_apart_or_refused(clip):
     shutil.copy(clip / "one_MTL.txt", clip / "three_MTL.txt")
     with pytest.raises(InputProblem, match="one a scene"):
         describe(clip, "oli", CLIP_PATTERN, reflectance=TOP)
-
-
-def test_every_class_of_every_layout_is_a_known_word():
-    for row in load_table("quality_layouts").rows.values():
-        assert set(row["sensors"]) <= set(load_table("sensors").rows)
-        for word in row.get("classes", ()):
-            word_flags(word)
-        taken = 0
-        for name, first, words in row.get("fields", ()):
-            mask = ((1 << (len(words) - 1).bit_length()) - 1) << first
-            assert taken & mask == 0, f"{name} overlaps another field"
-            taken |= mask
-            for word in words:
-                word_flags(word, name)

@@ -154,9 +154,7 @@ def test_what_has_no_place_or_no_area_is_refused():
 
 
 def test_sizes_and_centres():
-    assert ground.cell_size_m(Grid("EPSG:2263", 980000.0, 200000.0, 100.0, 50.0, 3, 3)) == pytest.approx(
-        30.48006096
-    )
+    assert ground.cell_size_m(Grid("EPSG:2263", 980000.0, 200000.0, 100.0, 50.0, 3, 3)) == pytest.approx(30.48006096)
     degree = ground.cell_size_m(Grid("EPSG:4326", 0.0, 1.0, 1.0, 0.5, 2, 2))
     assert degree == pytest.approx(math.radians(1) * 6378137)
     lon, lat = ground.centre_lonlat(replace(UTM, left=500000.0 - 54900.0))

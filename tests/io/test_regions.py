@@ -277,8 +277,7 @@ def test_files_that_are_no_vector_files_are_refused(tmp_path):
     good = write(tmp_path / "good.geojson", [feature(BOX, id="a")])
     virtual = tmp_path / "list.vrt"
     virtual.write_text(
-        f'<OGRVRTDataSource><OGRVRTLayer name="good"><SrcDataSource>{good}</SrcDataSource></OGRVRTLayer>'
-        "</OGRVRTDataSource>",
+        f'<OGRVRTDataSource><OGRVRTLayer name="good"><SrcDataSource>{good}</SrcDataSource></OGRVRTLayer></OGRVRTDataSource>',
         encoding="utf-8",
     )
     with pytest.raises(InputProblem, match="other sources"):
@@ -294,9 +293,7 @@ def test_a_missing_crs_is_refused(tmp_path):
 
 
 def test_windows_off_every_region_are_one_run():
-    lengths, _, sets = Membership(regions_of(("a", None, square(0, 0, 5, 5))), GRID).runs(
-        Window(20, 20, 7, 9)
-    )
+    lengths, _, sets = Membership(regions_of(("a", None, square(0, 0, 5, 5))), GRID).runs(Window(20, 20, 7, 9))
     assert lengths.tolist() == [63]
     assert sets[0].ids == ()
     far = replace(GRID, left=700000.0)

@@ -111,9 +111,7 @@ BAD_ITEMS = {
     ),
     "nodata beyond the type": (classes("clear", data_type="uint8", nodata=999), "999"),
     "bit beyond the type": (
-        quality(
-            **{"classification:bitfields": [{"name": "cloud", "offset": 20, "length": 1, "classes": []}]}
-        ),
+        quality(**{"classification:bitfields": [{"name": "cloud", "offset": 20, "length": 1, "classes": []}]}),
         "16 bits",
     ),
     "no assets": (lambda body: body.pop("assets"), "assets"),
@@ -136,7 +134,8 @@ def test_a_bad_item_is_a_problem_and_the_others_go_on(tmp_path, case):
     assert len(problems) == 1
     assert problems[0].where == str(bad)
     assert said in str(problems[0])
-    assert str(pickle.loads(pickle.dumps(problems[0]))) == str(problems[0])
+    travelled = pickle.loads(pickle.dumps(problems[0]))
+    assert str(travelled) == str(problems[0])
 
 
 @pytest.mark.parametrize(
@@ -188,9 +187,7 @@ def test_any_value_anywhere_in_an_item_gives_a_scene_or_a_problem(data):
     at = body
     for _ in range(data.draw(st.integers(0, 5))):
         inner = [
-            key
-            for key in (at if isinstance(at, dict) else range(len(at)))
-            if isinstance(at[key], dict | list) and at[key]
+            key for key in (at if isinstance(at, dict) else range(len(at))) if isinstance(at[key], dict | list) and at[key]
         ]
         if not inner:
             break
@@ -293,9 +290,7 @@ def test_a_missing_band_is_said_with_those_there_are(tmp_path):
 
 def test_a_file_with_fewer_bands_than_the_item_is_refused(tmp_path):
     body = item_body()
-    body["assets"] = {
-        "all": {"href": "all.tif", "bands": [band_asset("", name)["bands"][0] for name in BANDS]}
-    }
+    body["assets"] = {"all": {"href": "all.tif", "bands": [band_asset("", name)["bands"][0] for name in BANDS]}}
     write_raster(tmp_path / "all.tif", np.stack([numbers(), numbers()]))
     write_item(tmp_path / "item.json", body)
     assert "at least 3 bands" in str(problem_of(tmp_path))

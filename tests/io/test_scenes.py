@@ -15,15 +15,16 @@ from firnlight.core.grid import Grid, Window
 from firnlight.core.layers import flag_bit
 from firnlight.core.tables import load_table
 from firnlight.io.bands import SceneReader, content_files, native_block
-from firnlight.io.quality import plain_word, word_flags
 from firnlight.io.scenes import find_scenes, open_scene
 from scene_maker import (
     BANDS,
     CELL,
+    CLOUD_BITS,
     COLS,
     CRS,
     LEFT,
     ROWS,
+    SCENE_CLASSES,
     TOP,
     band_asset,
     item_body,
@@ -286,9 +287,9 @@ def test_mixed_types_come_as_float32_with_nan_for_empty(tmp_path):
     assert np.isnan(nodata).all()
 
 
-WINDOWS = st.tuples(
-    st.integers(0, ROWS - 1), st.integers(0, COLS - 1), st.integers(1, ROWS), st.integers(1, COLS)
-).map(lambda w: Window(w[0], w[1], min(w[2], ROWS - w[0]), min(w[3], COLS - w[1])))
+WINDOWS = st.tuples(st.integers(0, ROWS - 1), st.integers(0, COLS - 1), st.integers(1, ROWS), st.integers(1, COLS)).map(
+    lambda w: Window(w[0], w[1], min(w[2], ROWS - w[0]), min(w[3], COLS - w[1]))
+)
 
 
 @pytest.fixture(scope="module")
@@ -303,12 +304,8 @@ def mixed_scene(tmp_path_factory):
     make_scene(folder, body, green=noise.random((ROWS, COLS)).astype("float32"))
     write_raster(folder / "red.tif", fine.astype("float32"), cell=CELL / 3)
     write_raster(folder / "nir.tif", coarse.astype("float32"), cell=CELL * 2)
-    write_raster(
-        folder / "quality.tif", noise.integers(0, 64, (ROWS * 2, COLS * 2)).astype("uint8"), cell=CELL / 2
-    )
-    write_raster(
-        folder / "classes.tif", noise.integers(0, 12, (ROWS // 6, COLS // 6)).astype("uint8"), cell=CELL * 6
-    )
+    write_raster(folder / "quality.tif", noise.integers(0, 64, (ROWS * 2, COLS * 2)).astype("uint8"), cell=CELL / 2)
+    write_raster(folder / "classes.tif", noise.integers(0, 12, (ROWS // 6, COLS // 6)).astype("uint8"), cell=CELL * 6)
     reader = SceneReader(opened(folder), BANDS)
     yield reader, reader.read(WHOLE)
     reader.close()
@@ -324,108 +321,6 @@ def test_no_cutting_into_windows_changes_a_bit(mixed_scene, window):
     assert part_flags.tobytes() == flags[rows, cols].tobytes()
 
 
-# quality
-
-
-def bit(name, offset):
-    classes = [{"value": 0, "name": f"not_{name}"}, {"value": 1, "name": name}]
-    return {"name": name, "offset": offset, "length": 1, "classes": classes}
-
-
-CONFIDENCE = [{"value": n, "name": word} for n, word in enumerate(("not_set", "low", "medium", "high"))]
-CLOUD_BITS = {
-    "href": "quality.tif",
-    "bands": [{"data_type": "uint8"}],
-    "classification:bitfields": [
-        bit("fill", 0),
-        bit("Cloud-Shadow", 1),
-        bit("snow", 2),
-        bit("saturated", 3),
-        {"name": "cloud_confidence", "offset": 4, "length": 2, "classes": CONFIDENCE},
-    ],
-}
-CLASS_NAMES = (
-    "no_data",
-    "saturated_or_defective",
-    "dark_area",
-    "cloud_shadow",
-    "vegetation",
-    "not_vegetated",
-    "water",
-    "unclassified",
-    "cloud_medium_probability",
-    "cloud_high_probability",
-    "thin_cirrus",
-    "Snow / Ice",
-)
-SCENE_CLASSES = {
-    "href": "classes.tif",
-    "bands": [{"classification:classes": [{"value": n, "name": word} for n, word in enumerate(CLASS_NAMES)]}],
-}
-
-
-def quality_of(tmp_path, asset, cells):
-    body = item_body()
-    body["assets"]["quality"] = asset
-    make_scene(tmp_path, body)
-    write_raster(tmp_path / asset["href"], cells)
-    return read(tmp_path)[2]
-
-
-def bits(*flags):
-    return sum(flag_bit(flag) for flag in flags)
-
-
-def test_bitfields_become_our_flags(tmp_path):
-    cells = np.zeros((ROWS, COLS), np.uint8)
-    cells[0, :8] = [0, 1, 2, 4, 8, 0b010000, 0b100000, 0b110000]
-    cells[0, 8] = 0b110111
-    flags = quality_of(tmp_path, CLOUD_BITS, cells)
-    said = [0, bits("missing"), bits("shadow"), bits("snow"), bits("saturated"), 0, 0, bits("cloud")]
-    assert flags[0, :8].tolist() == said
-    assert flags[0, 8] == bits("missing", "shadow", "snow", "cloud")
-    assert not flags[1:].any()
-
-
-def test_classes_become_our_flags_and_an_unlisted_number_is_missing(tmp_path):
-    cells = np.full((ROWS, COLS), 6, np.uint8)
-    cells[0, :13] = range(13)
-    flags = quality_of(tmp_path, SCENE_CLASSES, cells)
-    cloud = bits("cloud")
-    assert flags[0, :13].tolist() == [
-        bits("missing"),
-        bits("saturated", "missing"),
-        bits("shadow"),
-        bits("shadow"),
-        0,
-        0,
-        0,
-        0,
-        cloud,
-        cloud,
-        cloud,
-        bits("snow"),
-        bits("missing"),
-    ]
-    assert not flags[1:].any()
-
-
-def test_a_signed_quality_raster_is_read_by_its_bits(tmp_path):
-    asset = {
-        "href": "quality.tif",
-        "bands": [{"data_type": "int16", "nodata": -2}],
-        "classification:bitfields": [bit("cloud", 15), bit("snow", 1)],
-    }
-    cells = np.zeros((ROWS, COLS), np.int16)
-    cells[0, :3] = [-32768, 2, -2]
-    assert quality_of(tmp_path, asset, cells)[0, :4].tolist() == [
-        bits("cloud"),
-        bits("snow"),
-        bits("cloud", "snow", "missing"),
-        0,
-    ]
-
-
 def test_the_flags_of_finer_and_several_quality_rasters_are_joined(mixed_scene):
     reader, (_, _, flags) = mixed_scene
     folder = Path(reader._scene.item_path).parent
@@ -435,31 +330,6 @@ def test_the_flags_of_finer_and_several_quality_rasters_are_joined(mixed_scene):
         coarse = dataset.read(1).repeat(6, 0).repeat(6, 1)
     shadow = ((fine & 2) != 0).reshape(ROWS, 2, COLS, 2).any(axis=(1, 3)) | np.isin(coarse, (2, 3))
     np.testing.assert_array_equal((flags & flag_bit("shadow")) != 0, shadow)
-
-
-@given(st.text(max_size=40))
-def test_case_and_separators_of_a_class_do_not_count(text):
-    assert plain_word(plain_word(text)) == plain_word(text)
-    assert plain_word(f"  {text.upper()} - ") == plain_word(text.upper().lower()) or not text.isascii()
-
-
-@pytest.mark.parametrize(
-    ("word", "field", "flags"),
-    [
-        ("CLOUD SHADOW", "", ("shadow",)),
-        ("high", "cloud_confidence", ("cloud",)),
-        ("high", "Cirrus Confidence", ("cloud",)),
-        ("medium", "cloud_confidence", ()),
-        ("not_cloud", "", ()),
-        ("no cloud", "", ()),
-        ("no-data", "", ("missing",)),
-        ("not_valid", "", ("missing",)),
-        ("unclassified", "", ()),
-    ],
-    ids=str,
-)
-def test_words_of_the_table(word, field, flags):
-    assert word_flags(word, field) == bits(*flags)
 
 
 # a real raster
@@ -478,9 +348,7 @@ def test_a_real_scene_of_six_bands_opens_and_is_ordered_as_nature_orders_it(tmp_
     names = ("blue", "green", "red", "nir", "swir16", "swir22")
     about = {"data_type": "uint8", "raster:scale": 1 / 255, "raster:offset": 0.0, "nodata": 0}
     body = item_body(**properties)
-    body["assets"] = {
-        "all": {"href": ETM.name, "bands": [band_asset("", name, **about)["bands"][0] for name in names]}
-    }
+    body["assets"] = {"all": {"href": ETM.name, "bands": [band_asset("", name, **about)["bands"][0] for name in names]}}
     write_item(tmp_path / "item.json", body)
     values, _, _ = read(tmp_path, names, Window(10, 20, 140, 140))
     np.testing.assert_array_equal(values, cells[:, 10:150, 20:160])

@@ -130,9 +130,7 @@ def test_children_and_rest_add_up_to_their_parent_and_overlap_is_told(tmp_path, 
             area[region] = area.get(region, 0) + one.area_cm2
     assert area["upper"] + area["lower"] + area["basin/rest"] == area["basin"]
     assert table.region_names["basin/rest"] == "rest of BASIN"
-    assert table.warnings == (
-        "region basin: 100 cells lie in several of its parts; the first in the file has them",
-    )
+    assert table.warnings == ("region basin: 100 cells lie in several of its parts; the first in the file has them",)
     assert sum(one.cells for one in table.strata if "upper" in one.regions) == 25 * 25
 
 
@@ -229,9 +227,7 @@ def test_cover_without_data_is_other_even_where_its_code_is_listed(tmp_path):
 
 @pytest.mark.parametrize("which", ["elevation", "cover"])
 def test_a_layer_on_another_grid_is_refused_with_its_name(tmp_path, which):
-    path = write(
-        tmp_path / f"{which}.tif", np.zeros(GRID.shape, np.float32), replace(GRID, left=GRID.left + 15)
-    )
+    path = write(tmp_path / f"{which}.tif", np.zeros(GRID.shape, np.float32), replace(GRID, left=GRID.left + 15))
     with pytest.raises(InputProblem, match=r"origin shifted by 0\.500 of a cell") as caught:
         build(tmp_path, **{which: path})
     assert caught.value.where == path
@@ -253,35 +249,26 @@ def test_zonal_totals_equal_exactextract(tmp_path):
     table, raster = build(tmp_path, regions, grids={"a": GRID})
     area = cell_areas_cm2(areas(GRID), GRID.whole)
     paths = [write(tmp_path / "v.tif", values), write(tmp_path / "w.tif", area.astype(np.float64))]
-    shapes = [
-        {"type": "Feature", "geometry": json.loads(shapely.to_geojson(region.geometry))}
-        for region in regions.all
-    ]
+    shapes = [{"type": "Feature", "geometry": json.loads(shapely.to_geojson(region.geometry))} for region in regions.all]
     with rasterio.open(paths[0]) as v, rasterio.open(paths[1]) as w:
         found = exactextract.exact_extract(v, shapes, ["weighted_sum", "count"], weights=w)
     for region, one in zip(regions.all, found, strict=True):
         numbers = [n for n, s in enumerate(table.strata) if region.id in s.regions]
         cells = np.isin(raster, numbers)
-        assert one["properties"]["weighted_sum"] == pytest.approx(
-            (values[cells] * area[cells]).sum(), rel=1e-12
-        )
+        assert one["properties"]["weighted_sum"] == pytest.approx((values[cells] * area[cells]).sum(), rel=1e-12)
         assert one["properties"]["count"] == sum(table.strata[n].cells for n in numbers)
 
 
 def geodesic_cm2(polygon):
     """Area of a polygon in GRID's CRS by pyproj.Geod, edges cut to 100 m. [cm2]"""
     move = to_lonlat(GRID.crs)
-    dense = shapely.transform(
-        shapely.segmentize(polygon, 100), lambda xy: np.column_stack(move.transform(*xy.T))
-    )
+    dense = shapely.transform(shapely.segmentize(polygon, 100), lambda xy: np.column_stack(move.transform(*xy.T)))
     return abs(Geod(ellps="WGS84").geometry_area_perimeter(dense)[0]) * 1e4
 
 
 def test_ground_outside_every_tile_matches_the_geodesic_area():
     """shapely difference in the tiles' CRS, measured by pyproj.Geod."""
-    regions = boxes(
-        ("in", None, 5, 5, 20, 20), ("half", None, 60, 50, 200, 100), ("out", None, 300, 300, 350, 310)
-    )
+    regions = boxes(("in", None, 5, 5, 20, 20), ("half", None, 60, 50, 200, 100), ("out", None, 300, 300, 350, 310))
     found = strata.outside_area_cm2(regions, GRIDS)
     covered = shapely.union_all([shapely.box(g.left, g.bottom, g.right, g.top) for g in GRIDS.values()])
     assert found["in"] == 0

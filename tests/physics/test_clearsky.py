@@ -88,8 +88,7 @@ def test_more_aerosol_less_beam_and_a_brighter_sky(zenith, aerosol, more):
 @given(st.floats(0, 85), st.floats(-100, 5000), st.floats(1, 1000))
 def test_higher_ground_gets_more_beam(zenith, elevation, climb):
     low, high = (
-        clearsky.bird(zenith, SPACE_WM2, clearsky.pressure_pa(height), CLEAN)
-        for height in (elevation, elevation + climb)
+        clearsky.bird(zenith, SPACE_WM2, clearsky.pressure_pa(height), CLEAN) for height in (elevation, elevation + climb)
     )
     assert high.direct_normal_wm2 > low.direct_normal_wm2
 
@@ -98,8 +97,7 @@ def test_higher_ground_gets_more_beam(zenith, elevation, climb):
 def test_brighter_ground_gets_more_light(zenith, albedo, more):
     sky = clearsky.bird(zenith, SPACE_WM2, SEA_LEVEL_PA, CLEAN)
     dark, bright = (
-        clearsky.global_horizontal(sky.black_ground_wm2, sky.sky_albedo, ground)
-        for ground in (albedo, albedo + more)
+        clearsky.global_horizontal(sky.black_ground_wm2, sky.sky_albedo, ground) for ground in (albedo, albedo + more)
     )
     assert sky.black_ground_wm2 <= dark < bright
 

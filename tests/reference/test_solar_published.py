@@ -259,9 +259,7 @@ def test_solar_constant_holds_the_standard_spectrum():
 
 def test_every_constant_has_a_value_a_unit_and_a_source():
     table = load_table("constants")
-    assert {"solar_constant", "stefan_boltzmann", "standard_pressure", "latent_heat_of_fusion"} <= set(
-        table.rows
-    )
+    assert {"solar_constant", "stefan_boltzmann", "standard_pressure", "latent_heat_of_fusion"} <= set(table.rows)
     for row in table.rows.values():
         assert set(row) == {"value", "unit", "source"}
         assert row["value"] > 0

@@ -76,8 +76,10 @@ class Grid:
 
     def centres(self, window: Window) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """x of each column (cols,) and y of each row (rows,) of a window, cell centres. [CRS units]"""
-        x = self.left + (np.arange(window.col, window.col + window.cols) + 0.5) * self.dx
-        y = self.top - (np.arange(window.row, window.row + window.rows) + 0.5) * self.dy
+        cols = np.arange(window.col, window.col + window.cols, dtype=np.float64)
+        rows = np.arange(window.row, window.row + window.rows, dtype=np.float64)
+        x: NDArray[np.float64] = self.left + (cols + 0.5) * self.dx
+        y: NDArray[np.float64] = self.top - (rows + 0.5) * self.dy
         return x, y
 
     def windows(self, rows: int, cols: int) -> Iterator[Window]:

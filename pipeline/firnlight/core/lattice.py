@@ -50,9 +50,7 @@ class Lattice:
         return bottom
 
 
-def node_positions(
-    grid: Grid, row_step: int, col_step: int
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+def node_positions(grid: Grid, row_step: int, col_step: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """x of each node column and y of each node row of a tile. [CRS units]"""
     rows = np.arange((grid.rows - 1) // row_step + 2) * row_step
     cols = np.arange((grid.cols - 1) // col_step + 2) * col_step

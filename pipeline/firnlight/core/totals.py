@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, fields, replace
+from typing import Any
 
 from firnlight.core.layers import layer
 
@@ -53,16 +54,18 @@ class Totals:
         """From the columns of the zone kernel for seen cells."""
         if not sums:
             return cls()
-        rest = {k: v for k, v in sums.items() if not k.startswith("u_noise")}
+        rest: dict[str, Any] = {k: v for k, v in sums.items() if not k.startswith("u_noise")}
         squares = (sums["u_noise_hh"] << 56) + (sums["u_noise_hl"] << 29) + sums["u_noise_ll"]
-        return cls(**rest, u_noise2=squares, bins=bins)
+        return cls(bins=bins, u_noise2=squares, **rest)
 
     @classmethod
     def unseen(cls, sums: dict[str, int]) -> Totals:
         """From the columns of the zone kernel for unseen cells."""
         if not sums:
             return cls()
-        return cls(**{{"cells": "unseen_cells", "area": "unseen_area"}.get(k, k): v for k, v in sums.items()})
+        names = {"cells": "unseen_cells", "area": "unseen_area"}
+        renamed: dict[str, Any] = {names.get(k, k): v for k, v in sums.items()}
+        return cls(**renamed)
 
     def __add__(self, other: Totals) -> Totals:
         sums = {f.name: getattr(self, f.name) + getattr(other, f.name) for f in fields(self) if f.name != "bins"}
@@ -132,7 +135,11 @@ class Totals:
         """Standard uncertainty of reflected / incoming: the parts that come from albedo, over the insolation."""
         if not self.insolation:
             return math.nan
-        from_albedo = (self.absorbed_u_independent, self.absorbed_u_local, self._mean(self.u_calibration, U_STEP_WM2))
+        from_albedo = (
+            self.absorbed_u_independent,
+            self.absorbed_u_local,
+            self._mean(self.u_calibration, U_STEP_WM2),
+        )
         return math.hypot(*from_albedo) / self.insolation_wm2
 
     @property

@@ -76,9 +76,7 @@ def _about(seed: int, overpasses: list[Overpass], climate: weather.Climate) -> s
     facts = {
         "what": "the truth behind an invented area; every number of it is made up",
         "seed": seed,
-        "relative_calibration_error": {
-            b: round(e, 6) for b, e in zip(BANDS, sky.calibration(seed), strict=True)
-        },
+        "relative_calibration_error": {b: round(e, 6) for b, e in zip(BANDS, sky.calibration(seed), strict=True)},
         "noise": table.row("sensor")["noise"],
         "sky": {name: value for name, value in table.row("sky").items() if name != "source"},
         "stations": {weather.STATION: weather.station_place()},
@@ -124,9 +122,7 @@ def write_demo(
     All files written. The same arguments give the same bytes on the same libraries.
     """
     if min(tiles, scenes, years) < 1 or size < 16:
-        raise ValueError(
-            f"tiles={tiles}, size={size}, scenes={scenes}, years={years}: at least 1 each, and 16 cells"
-        )
+        raise ValueError(f"tiles={tiles}, size={size}, scenes={scenes}, years={years}: at least 1 each, and 16 cells")
     folder = Path(folder)
     folder.mkdir(parents=True, exist_ok=True)
     area = layout.tiles(tiles, size)

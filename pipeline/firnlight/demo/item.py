@@ -70,9 +70,7 @@ def write_item(folder: Path, tile: Tile, scene: str, time: dt.datetime) -> Path:
         }
         for bit, (name, meaning) in enumerate(QUALITY_BITS)
     ]
-    quality = _asset(folder / "quality.tif", "quality mask") | {
-        "bands": [{"name": "quality", "data_type": "uint8"}]
-    }
+    quality = _asset(folder / "quality.tif", "quality mask") | {"bands": [{"name": "quality", "data_type": "uint8"}]}
     assets["quality"] = quality | {
         "roles": ["cloud", "cloud-shadow", "snow-ice"],
         "classification:bitfields": fields,

@@ -61,9 +61,7 @@ def tiles(count: int, size: int) -> list[Tile]:
     made: list[Tile] = []
     for zone, number in ((0, west), (1, count - west)):
         side = -0.5 if zone == 0 else 0.5
-        x, y = from_plane(
-            np.array([side * pitch_cells * CELL_M if count > 1 else 0.0]), np.array([0.0]), ZONES[zone]
-        )
+        x, y = from_plane(np.array([side * pitch_cells * CELL_M if count > 1 else 0.0]), np.array([0.0]), ZONES[zone])
         col0, row0 = round(x[0] / CELL_M) - size // 2, round(y[0] / CELL_M) + size // 2
         for n in range(number):
             row, col = n % high, n // high
@@ -95,15 +93,12 @@ def overpasses(scenes: int, years: int) -> list[dt.datetime]:
         shares = [0.5] if scenes == 1 else [n / (scenes - 1) for n in range(scenes)]
         days = sorted({first + dt.timedelta(days=round(share * (last - first).days)) for share in shares})
         times += [
-            dt.datetime.combine(day, OVERPASS, dt.UTC) + dt.timedelta(seconds=day.toordinal() * 37 % 240)
-            for day in days
+            dt.datetime.combine(day, OVERPASS, dt.UTC) + dt.timedelta(seconds=day.toordinal() * 37 % 240) for day in days
         ]
     return times
 
 
-def outside_swath(
-    x_m: NDArray[np.float32], y_m: NDArray[np.float32], around: Extent, number: int
-) -> NDArray[np.bool_]:
+def outside_swath(x_m: NDArray[np.float32], y_m: NDArray[np.float32], around: Extent, number: int) -> NDArray[np.bool_]:
     """Cells that an overpass did not reach: every third one leaves out a strip in the west; any shape."""
     if number % 3 != 1:
         return np.zeros(x_m.shape, bool)
@@ -115,9 +110,7 @@ def _wavy(start: tuple[float, float], stop: tuple[float, float], sway: float, na
     """A line from start to stop that sways aside by a share of its length."""
     t = np.linspace(0, 1, 41)
     phase = chance("outline", name).random(2) * 2 * np.pi
-    aside = (
-        sway * (np.sin(2 * np.pi * t + phase[0]) + 0.5 * np.sin(6 * np.pi * t + phase[1])) * np.sin(np.pi * t)
-    )
+    aside = sway * (np.sin(2 * np.pi * t + phase[0]) + 0.5 * np.sin(6 * np.pi * t + phase[1])) * np.sin(np.pi * t)
     dx, dy = stop[0] - start[0], stop[1] - start[1]
     return np.column_stack([start[0] + t * dx - aside * dy, start[1] + t * dy + aside * dx])
 
@@ -129,9 +122,7 @@ def _region_shapes(around: Extent) -> list[tuple[str, str, str, Any]]:
     angle = np.linspace(0, 2 * np.pi, 121)[:-1]
     squareness = 1 / (np.abs(np.cos(angle)) ** 4 + np.abs(np.sin(angle)) ** 4) ** 0.25
     reach = squareness * (0.45 + 0.02 * np.sin(3 * angle + 1) + 0.012 * np.sin(7 * angle))
-    basin = shapely.Polygon(
-        np.column_stack([cx + width * reach * np.cos(angle), cy + height * reach * np.sin(angle)])
-    )
+    basin = shapely.Polygon(np.column_stack([cx + width * reach * np.cos(angle), cy + height * reach * np.sin(angle)]))
     far = max(width, height)
     water = _wavy((cx - far, cy + 0.03 * height), (cx + far, cy - 0.02 * height), 0.02, "watershed")
     cross = _wavy((cx + 0.04 * width, cy - far), (cx - 0.05 * width, cy + far), 0.02, "divide")

@@ -31,9 +31,7 @@ def row_noise(row: int, cols: int, *facts: object) -> Floats:
 
 @cache
 def _table() -> Floats:
-    values = chance("table of the value noise").random(_SIDE * _SIDE, dtype=np.float32) * np.float32(
-        2
-    ) - np.float32(1)
+    values = chance("table of the value noise").random(_SIDE * _SIDE, dtype=np.float32) * np.float32(2) - np.float32(1)
     values.setflags(write=False)
     return values
 

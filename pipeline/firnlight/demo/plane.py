@@ -52,9 +52,7 @@ class TilePlane:
         return self._read(self._nodes[0], rows, cols), self._read(self._nodes[1], rows, cols)
 
     def _read(self, nodes: Doubles, rows: Whole, cols: Whole) -> Floats:
-        i, j = (
-            np.clip(n // NODE_CELLS, 0, size - 2) for n, size in zip((rows, cols), nodes.shape, strict=True)
-        )
+        i, j = (np.clip(n // NODE_CELLS, 0, size - 2) for n, size in zip((rows, cols), nodes.shape, strict=True))
         fr, fc = (rows / NODE_CELLS - i)[:, np.newaxis], cols / NODE_CELLS - j
         first = int(i.min())
         near = nodes[first : int(i.max()) + 2]

@@ -25,8 +25,7 @@ STRIP_CELLS = 200_000  # worked on at once, so that it stays in the processor's 
 TOGETHER_BYTES = 200_000_000  # of unwritten blocks held for overpasses that share one pass over the ground
 BYTES_A_CELL = 20  # of an overpass: six bands, quality and truth
 CLOUD_BITS = (
-    "bits: 1 cloud, 2 cloud shadow, 4 clear snow edge that the quality mask calls cloud, "
-    "8 thin cloud that it misses"
+    "bits: 1 cloud, 2 cloud shadow, 4 clear snow edge that the quality mask calls cloud, 8 thin cloud that it misses"
 )
 TRUTH_LAYERS = ("albedo", "insolation", "absorbed_shortwave")
 
@@ -148,9 +147,7 @@ def _fill_strip(
     albedo = state.albedo
     insolation = truth.stored("insolation", light.at(ground.x_m, ground.y_m, ground.elevation_m, albedo))
     white = truth.stored("albedo", albedo)
-    for writer, values in zip(
-        files.truth, (white, insolation, truth.absorbed(white, insolation)), strict=True
-    ):
+    for writer, values in zip(files.truth, (white, insolation, truth.absorbed(white, insolation)), strict=True):
         writer.put(first, values)
     files.cloud.put(first, cloud)
 
@@ -184,9 +181,7 @@ def write_tile(
             static = folder / "static" / tile.name
             ground_files = []
             if start == 0:
-                height = _Writer(
-                    static / "elevation.tif", tile.grid, "float32", -9999.0, stack, {"unit": "m"}
-                )
+                height = _Writer(static / "elevation.tif", tile.grid, "float32", -9999.0, stack, {"unit": "m"})
                 ground_files = [height, _Writer(static / "land_cover.tif", tile.grid, "uint8", 0, stack, {})]
             files = [_open_scene(folder, tile, one.scene(tile), stack) for one in group]
             lights = [truth.day_insolation(tile.grid, one.day.time.date()) for one in group]
@@ -199,10 +194,7 @@ def write_tile(
                     _fill_strip(scene_files, plane, ground, tile, one, light, first, last)
         written += [writer.path for writer in ground_files]
         for scene_files, one in zip(files, group, strict=True):
-            written += [
-                w.path
-                for w in (*scene_files.bands, scene_files.quality, *scene_files.truth, scene_files.cloud)
-            ]
+            written += [w.path for w in (*scene_files.bands, scene_files.quality, *scene_files.truth, scene_files.cloud)]
             written.append(write_item(scene_files.quality.path.parent, tile, one.scene(tile), one.day.time))
             on_scene(one.scene(tile))
     return written

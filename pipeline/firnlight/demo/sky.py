@@ -95,9 +95,7 @@ def days_since_snowfall(day: dt.date, seed: int) -> float:
 def calibration(seed: int) -> tuple[float, ...]:
     """Relative error of each band's calibration: one draw per band for the sensor."""
     return tuple(
-        float(e)
-        for e in chance(seed, "calibration", SENSOR).standard_normal(len(BANDS))
-        * _row("sensor")["calibration"]
+        float(e) for e in chance(seed, "calibration", SENSOR).standard_normal(len(BANDS)) * _row("sensor")["calibration"]
     )
 
 
@@ -133,9 +131,7 @@ class Surface:
 
     def seen(self, column: int) -> Floats:
         """Reflectance in the band number `column` of BANDS; the true albedo for one more. [1]"""
-        fresh, old, conifer = (
-            endmembers()[SURFACES.index(n), column] for n in ("fresh_snow", "old_snow", "conifer")
-        )
+        fresh, old, conifer = (endmembers()[SURFACES.index(n), column] for n in ("fresh_snow", "old_snow", "conifer"))
         value = _snow_free()[:, column].take(self.ground.cover)
         value *= self.brightness
         snow = self.fresh * (fresh - old)
@@ -183,9 +179,7 @@ def opacity(x_m: Floats, y_m: Floats, day: Day) -> Floats:
 def shadow_offset_m(day: Day) -> tuple[float, float]:
     """From a place to the one under the cloud that shades it, east and north. [m]"""
     reach = _row("sky")["cloud_height_m"] * np.tan(np.radians(day.zenith_deg))
-    return float(reach * np.sin(np.radians(day.azimuth_deg))), float(
-        reach * np.cos(np.radians(day.azimuth_deg))
-    )
+    return float(reach * np.sin(np.radians(day.azimuth_deg))), float(reach * np.cos(np.radians(day.azimuth_deg)))
 
 
 @dataclass(frozen=True)
@@ -222,9 +216,7 @@ def true_cloud(state: Surface, sky: Sky) -> NDArray[np.uint8]:
     called = edge & ~cloud & (sky.mistaken > np.float32(limits["called_cloud_above"]))
     thin = cloud & (sky.above < np.float32(limits["provider_limit"]))
     missed = thin & (sky.thin < np.float32(limits["missed_below"]))
-    bits = zip(
-        (cloud, shadow, called, missed), (TRUE_CLOUD, TRUE_SHADOW, CALLED_CLOUD, MISSED_CLOUD), strict=True
-    )
+    bits = zip((cloud, shadow, called, missed), (TRUE_CLOUD, TRUE_SHADOW, CALLED_CLOUD, MISSED_CLOUD), strict=True)
     return np.asarray(sum(mask * np.uint8(bit) for mask, bit in bits), np.uint8)
 
 
@@ -235,9 +227,7 @@ def light(ground: Ground, sky: Sky, day: Day) -> Floats:
     tangent = np.tan(zenith)
     # cos(incidence) / cos(zenith) = (1 - tan z (east sin A + north cos A)) / sqrt(1 + east^2 + north^2)
     facing = (
-        _ONE
-        - np.float32(tangent * np.sin(azimuth)) * ground.east
-        - np.float32(tangent * np.cos(azimuth)) * ground.north
+        _ONE - np.float32(tangent * np.sin(azimuth)) * ground.east - np.float32(tangent * np.cos(azimuth)) * ground.north
     )
     facing /= np.sqrt(_ONE + ground.east * ground.east + ground.north * ground.north)
     facing = np.maximum(facing, np.float32(0))
@@ -276,7 +266,5 @@ def provider_mask(state: Surface, truth: NDArray[np.uint8], saturated: Any) -> N
     shadow = (truth & TRUE_SHADOW) != 0
     snow = state.snow * (_ONE - state.canopy) > np.float32(0.4)
     water = (state.ground.cover == LAKE) & ~snow
-    bits = zip(
-        (cloud, shadow, snow, water, saturated), (CLOUD, CLOUD_SHADOW, SNOW, WATER, SATURATED), strict=True
-    )
+    bits = zip((cloud, shadow, snow, water, saturated), (CLOUD, CLOUD_SHADOW, SNOW, WATER, SATURATED), strict=True)
     return np.asarray(sum(mask * np.uint8(bit) for mask, bit in bits), np.uint8)

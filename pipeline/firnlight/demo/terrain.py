@@ -145,13 +145,9 @@ def ground_rows(plane: TilePlane, first: int, last: int) -> Ground:
     height = np.maximum(raw, np.float32(LAKE_LEVEL_M))
     east, north = _slopes(height, plane.grid.dx, plane.grid.dy)
     inner = (slice(1, -1), slice(1, -1))
-    coarse: dict[Any, Floats] = {
-        f: plane.smooth(f, rows[1:-1], cols[1:-1], BROAD_CELLS) for f in (_tongues, _woods)
-    }
+    coarse: dict[Any, Floats] = {f: plane.smooth(f, rows[1:-1], cols[1:-1], BROAD_CELLS) for f in (_tongues, _woods)}
     x, y = np.ascontiguousarray(x[inner]), np.ascontiguousarray(y[inner])
-    return _ground(
-        x, y, height[inner], raw[inner], broad[inner], east, north, coarse[_tongues], coarse[_woods]
-    )
+    return _ground(x, y, height[inner], raw[inner], broad[inner], east, north, coarse[_tongues], coarse[_woods])
 
 
 def ground_at(x_m: Floats, y_m: Floats) -> Ground:
@@ -161,9 +157,7 @@ def ground_at(x_m: Floats, y_m: Floats) -> Ground:
     east = (elevation_m(x_m + d, y_m) - elevation_m(x_m - d, y_m)) / (2 * d)
     north = (elevation_m(x_m, y_m + d) - elevation_m(x_m, y_m - d)) / (2 * d)
     height = np.maximum(raw, np.float32(LAKE_LEVEL_M))
-    return _ground(
-        x_m, y_m, height, raw, broad_shape(x_m, y_m), east, north, _tongues(x_m, y_m), _woods(x_m, y_m)
-    )
+    return _ground(x_m, y_m, height, raw, broad_shape(x_m, y_m), east, north, _tongues(x_m, y_m), _woods(x_m, y_m))
 
 
 def _ground(

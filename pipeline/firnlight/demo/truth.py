@@ -68,9 +68,7 @@ def _height(elevation_m: Floats) -> Floats:
 
 def day_insolation(grid: Grid, day: dt.date) -> DayInsolation:
     """Fit a day over a tile: the clear-sky model at 5 x 5 places, every 200 m of height and 7 albedos."""
-    x, y = np.meshgrid(
-        np.linspace(grid.left, grid.right, POSITIONS), np.linspace(grid.bottom, grid.top, POSITIONS)
-    )
+    x, y = np.meshgrid(np.linspace(grid.left, grid.right, POSITIONS), np.linspace(grid.bottom, grid.top, POSITIONS))
     px, py = to_plane(x.ravel(), y.ravel(), grid.crs)
     lon, lat = from_plane(px, py, "EPSG:4326")
     moments = day_moments(day, lat, lon, LEVELS_M, air(), ORDERS)
@@ -79,17 +77,13 @@ def day_insolation(grid: Grid, day: dt.date) -> DayInsolation:
     reach = float(max(np.abs(px - x0).max(), np.abs(py - y0).max()))
     u, v = (px - x0) / reach, (py - y0) / reach
     place = np.stack([np.ones_like(u), u, v, u * u, v * v, u * v])
-    height = _height(LEVELS_M.astype(np.float32)).astype(np.float64)[:, np.newaxis] ** np.arange(
-        HEIGHT_POWERS
-    )
+    height = _height(LEVELS_M.astype(np.float32)).astype(np.float64)[:, np.newaxis] ** np.arange(HEIGHT_POWERS)
     white = ALBEDOS[:, np.newaxis] ** np.arange(ALBEDO_POWERS)
     basis = np.einsum("pn,zh,ak->nzaphk", place, height, white).reshape(wanted.size, -1)
     factors, *_ = np.linalg.lstsq(basis, wanted.ravel(), rcond=None)
     worst = float(np.abs(basis @ factors - wanted.ravel()).max())
     assert worst < WORST_WM2, f"the fit of {day} is off by {worst:.3f} W m-2"
-    return DayInsolation(
-        x0, y0, reach, factors.reshape(len(place), HEIGHT_POWERS, ALBEDO_POWERS).astype(np.float32)
-    )
+    return DayInsolation(x0, y0, reach, factors.reshape(len(place), HEIGHT_POWERS, ALBEDO_POWERS).astype(np.float32))
 
 
 def stored(name: str, values: Floats) -> NDArray[np.int16]:
@@ -100,6 +94,4 @@ def stored(name: str, values: Floats) -> NDArray[np.int16]:
 def absorbed(albedo: NDArray[np.int16], insolation: NDArray[np.int16]) -> NDArray[np.int16]:
     """(1 - albedo) x insolation from the stored integers, rounded half up."""
     one = round(1 / layer("albedo").step)
-    return ((insolation.astype(np.int32) * (one - albedo.astype(np.int32)) + one // 2) // one).astype(
-        np.int16
-    )
+    return ((insolation.astype(np.int32) * (one - albedo.astype(np.int32)) + one // 2) // one).astype(np.int16)

@@ -55,14 +55,9 @@ class Climate:
 
     @classmethod
     def of(cls, seed: int, days: list[sky.Day], around: Extent) -> Climate:
-        x, y = np.meshgrid(
-            np.linspace(around.left, around.right, 60), np.linspace(around.bottom, around.top, 60)
-        )
+        x, y = np.meshgrid(np.linspace(around.left, around.right, 60), np.linspace(around.bottom, around.top, 60))
         limit = _row("sky")["cloud_limit"]
-        covers = [
-            float((sky.opacity(x.astype(np.float32), y.astype(np.float32), day) > limit).mean())
-            for day in days
-        ]
+        covers = [float((sky.opacity(x.astype(np.float32), y.astype(np.float32), day) > limit).mean()) for day in days]
         return cls(seed, tuple(days), tuple(covers))
 
     def cloud_fraction(self, unix_s: Doubles) -> Doubles:
@@ -80,9 +75,7 @@ class Climate:
         low, high = numbers["sea_level_k"]
         season = low + (high - low) * np.array([sky.season_progress(day) for day in days])
         hour = np.mod(unix_s / 3600 - 2.4, 24)  # by the sun at 36 W
-        season += (
-            numbers["daily_k"] * np.cos((hour - 14) * np.pi / 12) * (1 - 0.6 * self.cloud_fraction(unix_s))
-        )
+        season += numbers["daily_k"] * np.cos((hour - 14) * np.pi / 12) * (1 - 0.6 * self.cloud_fraction(unix_s))
         season += numbers["spell_k"] * _in_time(unix_s, SPELL_S, self.seed, "warmth")
         return np.asarray(season[:, np.newaxis] - numbers["lapse_k_per_m"] * elevation_m)
 
@@ -92,9 +85,7 @@ class Climate:
         humidity = dry + (wet - dry) * self.cloud_fraction(unix_s)
         return np.asarray(humidity[:, np.newaxis] * saturation_pa(temperature_k))
 
-    def insolation_wm2(
-        self, starts_s: Doubles, step_s: float, lon: Doubles, lat: Doubles, elevation_m: Doubles
-    ) -> Doubles:
+    def insolation_wm2(self, starts_s: Doubles, step_s: float, lon: Doubles, lat: Doubles, elevation_m: Doubles) -> Doubles:
         """Mean over each step of what arrives under the clouds: (n, places). [W m-2]"""
         total = np.zeros((starts_s.size, lon.size))
         for part in range(SUBSTEPS):
@@ -103,10 +94,7 @@ class Climate:
             clear = bird(zenith, sun.solar_constant_wm2() / distance**2, pressure_pa(elevation_m), air())
             row = _row("kasten_czeplak_1980")
             through = 1 - row["factor"] * self.cloud_fraction(times) ** row["power"]
-            total += (
-                global_horizontal(clear.black_ground_wm2, clear.sky_albedo, COARSE_ALBEDO)
-                * through[:, np.newaxis]
-            )
+            total += global_horizontal(clear.black_ground_wm2, clear.sky_albedo, COARSE_ALBEDO) * through[:, np.newaxis]
         return total / SUBSTEPS
 
 
@@ -114,9 +102,7 @@ def _in_time(unix_s: Doubles, length_s: float, *facts: object) -> Doubles:
     """A smooth random course in about -1..1. (n,)"""
     hours = np.asarray((unix_s - 1.9e9) / 3600, np.float32)  # small enough for single precision
     course = value_noise(hours, np.zeros_like(hours), length_s / 3600, *facts)
-    return np.asarray(
-        course + 0.4 * value_noise(hours, np.zeros_like(hours), length_s / 3600 / 3.3, *facts), np.float64
-    )
+    return np.asarray(course + 0.4 * value_noise(hours, np.zeros_like(hours), length_s / 3600 / 3.3, *facts), np.float64)
 
 
 def saturation_pa(temperature_k: Doubles) -> Doubles:
@@ -159,9 +145,7 @@ def _grid(around: Extent) -> tuple[Doubles, Doubles]:
     x = np.array([around.left, around.right, around.right, around.left])
     lon, lat = from_plane(x, np.array([around.bottom, around.bottom, around.top, around.top]), "EPSG:4326")
     for step in SPACINGS_DEG:
-        axes = [
-            np.arange(np.floor(v.min() / step) - 1, np.ceil(v.max() / step) + 2) * step for v in (lon, lat)
-        ]
+        axes = [np.arange(np.floor(v.min() / step) - 1, np.ceil(v.max() / step) + 2) * step for v in (lon, lat)]
         if max(axes[0].size, axes[1].size) <= MOST_NODES:
             break
     return np.round(axes[0], 6), np.round(axes[1], 6)
@@ -259,9 +243,7 @@ def write_weather(folder: Path, climate: Climate, around: Extent) -> list[Path]:
     arriving = climate.insolation_wm2(hours, INSOLATION_STEP_S, all_lon, all_lat, height)
     name = "surface_downwelling_shortwave_flux_in_air"
     about = {"standard_name": name, "units": "W m-2", "cell_methods": "time: mean"}
-    _write_grid(
-        folder / "insolation.nc", hours, INSOLATION_STEP_S, lon, lat, {name: (shaped(arriving, 0.5), about)}
-    )
+    _write_grid(folder / "insolation.nc", hours, INSOLATION_STEP_S, lon, lat, {name: (shaped(arriving, 0.5), about)})
     return [folder / "weather.nc", folder / "insolation.nc"]
 
 
@@ -299,13 +281,8 @@ def write_station(path: Path, climate: Climate) -> Path:
             up = down * albedo * (1 + STATION_NOISE["sw"] * error[1])
             air_k = climate.temperature_k(middle, height)[:, 0] + STATION_NOISE["air"] * error[2]
             vapour = climate.vapour_pressure_pa(middle, air_k[:, np.newaxis])[:, 0]
-            longwave = (
-                longwave_down_wm2(air_k, vapour, climate.cloud_fraction(middle))
-                + STATION_NOISE["lw"] * error[3]
-            )
-            humidity = np.clip(
-                100 * vapour / saturation_pa(air_k) + STATION_NOISE["humidity"] * error[4], 1, 100
-            )
+            longwave = longwave_down_wm2(air_k, vapour, climate.cloud_fraction(middle)) + STATION_NOISE["lw"] * error[3]
+            humidity = np.clip(100 * vapour / saturation_pa(air_k) + STATION_NOISE["humidity"] * error[4], 1, 100)
             down = down * (1 + STATION_NOISE["sw"] * error[0])
             for n, time in enumerate(times):
                 stamp = f"{dt.datetime.fromtimestamp(float(time), dt.UTC):%Y-%m-%dT%H:%M:%SZ}"

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from firnlight.core.errors import InputProblem
 from firnlight.core.grid import Window
 from firnlight.io.rasters import open_raster, read_window
-from firnlight.io.scene_files import QUALITY_TYPES, OpenFiles, band_index
+from firnlight.io.scene_files import QUALITY_TYPES, OpenFiles, band_index, forget_trail
 from firnlight.io.sources import BandSource, QualitySource, Scene
 
 Numbers = NDArray[Any]
@@ -33,9 +33,7 @@ def native_block(scene: Scene) -> tuple[int, int]:
     InputProblem : the scene has no band, or its file cannot be opened.
     """
     if not scene.bands:
-        raise InputProblem(
-            scene.item_path, f"scene {scene.id}", "no band", "at least one band", "add bands to the item"
-        )
+        raise InputProblem(scene.item_path, f"scene {scene.id}", "no band", "at least one band", "add bands to the item")
     first = next(iter(scene.bands.values()))
     with open_raster(first.path) as dataset:
         rows, cols = dataset.block_shapes[band_index(dataset, first.path, "first band", first.band)]
@@ -99,6 +97,7 @@ class SceneReader:
         try:
             return read_window(self._files.get(path), window, band)
         except InputProblem as problem:
+            forget_trail(problem)
             problem.what = f"{what} of scene {self._scene.id}"
             problem.found = (
                 f"cells that cannot be read in rows {window.row} to {window.row + window.rows - 1}, "
@@ -112,7 +111,7 @@ class SceneReader:
             return cells
         numbers = cells.astype(np.float64)
         if source.nodata is not None:
-            pass
+            numbers[cells == np.asarray(source.nodata).astype(cells.dtype)] = math.nan
         n = source.ratio
         if n > 1:
             # one fixed order of sums: no cutting into windows changes a bit; one empty cell empties the mean
@@ -142,9 +141,7 @@ def _file_window(window: Window, ratio: int) -> Window:
         return Window(window.row * ratio, window.col * ratio, window.rows * ratio, window.cols * ratio)
     n = -ratio
     row, col = window.row // n, window.col // n
-    return Window(
-        row, col, -(-(window.row + window.rows) // n) - row, -(-(window.col + window.cols) // n) - col
-    )
+    return Window(row, col, -(-(window.row + window.rows) // n) - row, -(-(window.col + window.cols) // n) - col)
 
 
 def _repeated(cells: Numbers, window: Window, ratio: int) -> Numbers:

@@ -130,5 +130,9 @@ def read_block(dataset: Any, window: Window) -> NDArray[Any]:
         return dataset.read(window=RasterWindow(window.col, window.row, window.cols, window.rows))
     except rasterio.errors.RasterioIOError as error:
         raise InputProblem(
-            dataset.name, "cells", str(error), "a readable map", "delete the file: the next night makes it again"
+            dataset.name,
+            "cells",
+            str(error),
+            "a readable map",
+            "delete the file: the next night makes it again",
         ) from error

@@ -135,9 +135,7 @@ def _text_of(folder: Path, files: SceneFiles) -> SceneText | None:
             at = at.parent
     groups = [path for place in places for path in sorted(place.glob("*_MTL.txt"))]
     # beside several scenes each text is named as its rasters are
-    own = [
-        path for path in groups if any(one.name.startswith(path.name[: -len("MTL.txt")]) for one in files.all)
-    ]
+    own = [path for path in groups if any(one.name.startswith(path.name[: -len("MTL.txt")]) for one in files.all)]
     chosen = own or groups
     if len(chosen) > 1:
         dated = [path for path in chosen if (time := read_group_text(path).time) and time.date() == files.day]
@@ -184,9 +182,7 @@ def _check_text(text: SceneText, files: SceneFiles, given: _Given) -> None:
             if text.level == 1
             else 'leave out --reflectance, or say --reflectance "surface"'
         )
-        raise InputProblem(
-            where, "kind of reflectance", f"Level-{text.level}, {kind}", given.reflectance, fix
-        )
+        raise InputProblem(where, "kind of reflectance", f"Level-{text.level}, {kind}", given.reflectance, fix)
 
 
 def _raster(path: Path) -> _Raster:
@@ -266,9 +262,7 @@ def _quality_entry(tag: str, raster: _Raster, given: _Given) -> dict[str, Any]:
     row = fitting[0]
     entry: dict[str, Any] = {"name": tag, "data_type": raster.dtype}
     if "classes" in row:
-        return entry | {
-            "classification:classes": [{"value": n, "name": word} for n, word in enumerate(row["classes"])]
-        }
+        return entry | {"classification:classes": [{"value": n, "name": word} for n, word in enumerate(row["classes"])]}
     fields = [
         {
             "name": name,
@@ -348,9 +342,7 @@ def _item(folder: Path, files: SceneFiles, given: _Given) -> tuple[str, dict[str
     }
     for tag, one in quality.items():
         key = QUALITY if len(quality) == 1 else tag
-        assets[key] = _asset(
-            one, "quality of the cells", ["data", "quality"], _quality_entry(tag, one, given)
-        )
+        assets[key] = _asset(one, "quality of the cells", ["data", "quality"], _quality_entry(tag, one, given))
     moment = _moment(files, text, given)
     tile = files.tile or place_name(grid)
     name = f"{tile}_{files.day:%Y%m%d}_{given.sensor}"

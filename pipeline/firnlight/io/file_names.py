@@ -64,9 +64,7 @@ def _expression(pattern: str, tags: dict[str, str]) -> re.Pattern[str]:
         elif not piece.startswith("{"):
             parts.append(re.escape(piece))
         elif name not in forms:
-            raise InputProblem(
-                "--pattern", "pattern", piece, f"one of {known}", f"write {known} or * in the pattern"
-            )
+            raise InputProblem("--pattern", "pattern", piece, f"one of {known}", f"write {known} or * in the pattern")
         else:
             parts.append(f"(?P={name})" if name in seen else f"(?P<{name}>{forms[name]})")
             seen.add(name)
@@ -113,9 +111,7 @@ def find_files(folder: Path, sensor: str, pattern: str) -> list[SceneFiles]:
     scenes: dict[tuple[str, dt.date], SceneFiles] = {}
     names: list[str] = []
     if not folder.is_dir():
-        raise InputProblem(
-            str(folder), "folder", "no such folder", "a folder with rasters", "correct the path"
-        )
+        raise InputProblem(str(folder), "folder", "no such folder", "a folder with rasters", "correct the path")
     for at, folders, files in os.walk(folder):
         folders.sort()
         for name in sorted(files):
@@ -126,9 +122,7 @@ def find_files(folder: Path, sensor: str, pattern: str) -> list[SceneFiles]:
                 continue
             when = _when(fits["date"])
             if when is None:
-                raise InputProblem(
-                    str(path), "date in the name", fits["date"], "a day", "correct the file's name"
-                )
+                raise InputProblem(str(path), "date in the name", fits["date"], "a day", "correct the file's name")
             tile = fits.groupdict().get("tile") or ""
             scene = scenes.setdefault((tile, when[0]), SceneFiles(tile, *when))
             tag = fits["band"].lower()

@@ -14,7 +14,7 @@ _CHUNK = 1 << 20
 _MULTIHASH = {"1220": "sha256", "1340": "sha512", "1114": "sha1", "d50110": "md5"}
 
 
-def _digest(path: Path, hasher: "hashlib._Hash | xxhash.xxh3_128") -> str:
+def _digest(path: Path, hasher: hashlib._Hash | xxhash.xxh3_128) -> str:
     with path.open("rb", buffering=0) as stream:
         while chunk := stream.read(_CHUNK):
             hasher.update(chunk)

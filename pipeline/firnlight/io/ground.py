@@ -192,9 +192,7 @@ def areas(grid: Grid) -> Lattice:
         lattice = Lattice(step, step, grid.dx * grid.dy * unit**2 * 1e4 / scale)
     if lattice.values.max() > LARGEST_CELL_CM2:
         found, wanted = (f"{v / 1e10:.3g} km2" for v in (lattice.values.max(), LARGEST_CELL_CM2))
-        raise InputProblem(
-            "grid", "cell area", found, f"at most {wanted}", "use finer cells, or correct the CRS"
-        )
+        raise InputProblem("grid", "cell area", found, f"at most {wanted}", "use finer cells, or correct the CRS")
     return lattice
 
 

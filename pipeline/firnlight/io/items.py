@@ -43,7 +43,12 @@ def _asset(one: Asset, folder: Path) -> dict[str, Any]:
         "firnlight:key": one.key,
     }
     if one.name not in layer_names():
-        return {**entry, "type": "application/vnd.apache.parquet", "roles": ["metadata"], "title": "totals of the tile-day"}
+        return {
+            **entry,
+            "type": "application/vnd.apache.parquet",
+            "roles": ["metadata"],
+            "title": "totals of the tile-day",
+        }
     about = layer(one.name)
     bands = []
     for part in about.parts:
@@ -92,7 +97,12 @@ def product_item(
             "firnlight:stages": dict(chain),
         },
         "links": [
-            {"rel": "derived_from", "href": os.path.relpath(source, path.parent), "type": "application/geo+json", "title": scene}
+            {
+                "rel": "derived_from",
+                "href": os.path.relpath(source, path.parent),
+                "type": "application/geo+json",
+                "title": scene,
+            }
             for scene, source in sorted(sources.items())
         ],
         "assets": {one.name: _asset(one, path.parent) for one in assets},
@@ -133,10 +143,15 @@ def read_product_item(path: Path) -> StoredItem:
         )  # fmt: skip
         properties = item["properties"]
         return StoredItem(
-            properties["firnlight:tile"], dt.date.fromisoformat(properties["start_datetime"][:10]), properties["firnlight:key"],
+            properties["firnlight:tile"], dt.date.fromisoformat(properties["start_datetime"][:10]),
+            properties["firnlight:key"],
             tuple(link["title"] for link in item["links"] if link["rel"] == "derived_from"), assets,
         )  # fmt: skip
     except (OSError, ValueError, KeyError, TypeError) as error:
         raise InputProblem(
-            str(path), "item", str(error), "an item of this store", "delete the file: the next night makes it again"
+            str(path),
+            "item",
+            str(error),
+            "an item of this store",
+            "delete the file: the next night makes it again",
         ) from error

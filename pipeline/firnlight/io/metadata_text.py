@@ -87,9 +87,7 @@ def read_text(path: Path) -> str:
             raise InputProblem(str(path), "metadata", "no plain file", wanted, "deliver the file again")
         size = path.stat().st_size
         if size > LARGEST_TEXT_BYTES:
-            raise InputProblem(
-                str(path), "metadata", f"{size} bytes", "under 20 MB", "deliver the right file"
-            )
+            raise InputProblem(str(path), "metadata", f"{size} bytes", "under 20 MB", "deliver the right file")
         text = path.read_bytes().decode("utf-8-sig")
     except UnicodeDecodeError as error:
         fix = "deliver the file again"
@@ -233,9 +231,7 @@ def read_xml_text(path: Path) -> SceneText:
     try:
         root = ET.fromstring(text)
     except (ET.ParseError, ValueError, RecursionError) as error:
-        raise InputProblem(
-            str(path), "metadata", str(error), "an XML text", "deliver the file again"
-        ) from None
+        raise InputProblem(str(path), "metadata", str(error), "an XML text", "deliver the file again") from None
     found: dict[str, str] = {}
     offsets: dict[str, str] = {}
     specials: list[str] = []

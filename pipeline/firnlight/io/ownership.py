@@ -13,9 +13,7 @@ from firnlight.core.grid import SHIFT_LIMIT_CELLS, Grid, Window
 from firnlight.core.lattice import Lattice, node_positions
 from firnlight.io.ground import between, cell_size_m, centre_lonlat, is_geographic, to_lonlat, unit_of
 
-NODE_SPACING_M = (
-    4000.0  # of the map from one tile's cells to another's: off by less than a hundredth of a cell
-)
+NODE_SPACING_M = 4000.0  # of the map from one tile's cells to another's: off by less than a hundredth of a cell
 OUTLINE_POINTS = 22
 
 _Holds = NDArray[np.bool_]  # cells of a window that the other tile holds
@@ -78,20 +76,14 @@ class _SameCells:
 
     def holds(self, window: Window) -> _Holds:
         r, c = _cells(window)
-        return ((r >= self.row) & (r < self.row + self.other.rows)) & (
-            (c >= self.col) & (c < self.col + self.other.cols)
-        )
+        return ((r >= self.row) & (r < self.row + self.other.rows)) & ((c >= self.col) & (c < self.col + self.other.cols))
 
     def distances(self, window: Window) -> _Two:
         r, c = _cells(window)
 
         def squared(grid: Grid, row: int, col: int) -> Any:
             down, across = (2 * (r - row) + 1 - grid.rows) ** 2, (2 * (c - col) + 1 - grid.cols) ** 2
-            return (
-                down + across
-                if self.weights[0] == self.weights[1]
-                else self.weights[0] * down + self.weights[1] * across
-            )
+            return down + across if self.weights[0] == self.weights[1] else self.weights[0] * down + self.weights[1] * across
 
         return squared(self.own, 0, 0), squared(self.other, self.row, self.col)
 
@@ -192,9 +184,7 @@ class Owner:
             rows, cols = np.flatnonzero(holds.any(axis=1)), np.flatnonzero(holds.any(axis=0))
             if rows.size == 0:
                 continue
-            shared = Window(
-                int(rows[0]), int(cols[0]), int(rows[-1] - rows[0]) + 1, int(cols[-1] - cols[0]) + 1
-            )
+            shared = Window(int(rows[0]), int(cols[0]), int(rows[-1] - rows[0]) + 1, int(cols[-1] - cols[0]) + 1)
             there = replace(shared, row=window.row + shared.row, col=window.col + shared.col)
             mine, theirs = rival.distances(there)
             own[shared.slices] &= ~(holds[shared.slices] & ((theirs <= mine) if earlier else (theirs < mine)))

@@ -46,21 +46,15 @@ def open_raster(path: str | Path) -> Any:
         with open(name, "rb") as stream:
             first = stream.read(16)
     except OSError as error:
-        raise InputProblem(
-            name, "file", error.strerror or str(error), wanted, "make the file readable"
-        ) from None
+        raise InputProblem(name, "file", error.strerror or str(error), wanted, "make the file readable") from None
     driver = next((known for magic, known in MAGIC.items() if first.startswith(magic)), None)
     if driver is None:
-        raise InputProblem(
-            name, "file", f"bytes that begin {first!r}", wanted, "deliver the file again as a raster"
-        )
+        raise InputProblem(name, "file", f"bytes that begin {first!r}", wanted, "deliver the file again as a raster")
     try:
         return rasterio.open(name, driver=driver, sharing=False)
     except rasterio.errors.RasterioError as error:
         found = f"a broken {driver} file ({error})"
-        raise InputProblem(
-            name, "file", found, wanted, "deliver the file again: it is damaged or cut short"
-        ) from None
+        raise InputProblem(name, "file", found, wanted, "deliver the file again: it is damaged or cut short") from None
 
 
 def crs_text(crs: Any, where: str) -> str:
@@ -71,9 +65,7 @@ def crs_text(crs: Any, where: str) -> str:
     InputProblem : there is none.
     """
     if crs is None or not crs.to_wkt():
-        raise InputProblem(
-            where, "CRS", "none", "a coordinate reference system", "write the CRS into the file"
-        )
+        raise InputProblem(where, "CRS", "none", "a coordinate reference system", "write the CRS into the file")
     code = crs.to_epsg()
     return f"EPSG:{code}" if code else str(crs.to_wkt())
 

@@ -86,9 +86,7 @@ def _text(value: object) -> str:
         return ""
     if isinstance(value, float) and value.is_integer():
         value = int(value)  # whole numbers come as floats from columns with gaps
-    return "".join(
-        c for c in str(value) if unicodedata.category(c) not in ("Cc", "Cs") and c not in _STEERING
-    ).strip()
+    return "".join(c for c in str(value) if unicodedata.category(c) not in ("Cc", "Cs") and c not in _STEERING).strip()
 
 
 def polygons(geometry: Any) -> Any:
@@ -97,9 +95,7 @@ def polygons(geometry: Any) -> Any:
         geometry = shapely.make_valid(geometry)
     if geometry.geom_type in ("Polygon", "MultiPolygon"):
         return geometry
-    parts = [
-        part for part in shapely.get_parts(geometry, return_index=False) if shapely.get_dimensions(part) == 2
-    ]
+    parts = [part for part in shapely.get_parts(geometry, return_index=False) if shapely.get_dimensions(part) == 2]
     return shapely.union_all(parts) if parts else shapely.Polygon()
 
 
@@ -295,9 +291,7 @@ class Membership:
         return self._known[key]
 
     def _reached(self, region: Region, raw: set[str]) -> bool:
-        return region.id in raw or any(
-            self._reached(part, raw) for part in self._regions.children.get(region.id, ())
-        )
+        return region.id in raw or any(self._reached(part, raw) for part in self._regions.children.get(region.id, ()))
 
     def _assign(self, region: Region, raw: set[str], ids: list[str], contested: list[str]) -> None:
         if not self._reached(region, raw):
@@ -334,9 +328,7 @@ def _around(grid: Grid, crs: str) -> Any:
     )
     known = CRS.from_user_input(crs)
     turn = 2 * np.pi / known.axis_info[0].unit_conversion_factor if known.is_geographic else 0.0
-    return shapely.union_all(
-        [shapely.box(west + n * turn, south, east + n * turn, north) for n in (-1, 0, 1)]
-    )
+    return shapely.union_all([shapely.box(west + n * turn, south, east + n * turn, north) for n in (-1, 0, 1)])
 
 
 def _edges(geometry: Any, grid: Grid, number: int) -> NDArray[np.float64]:

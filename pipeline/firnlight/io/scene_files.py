@@ -22,6 +22,11 @@ QUALITY_TYPES = {"uint8": np.uint8, "int8": np.uint8, "uint16": np.uint16, "int1
 LARGEST_RATIO = 100  # beyond it the files do not show the same scene
 
 
+def forget_trail(problem: InputProblem) -> None:
+    """Cut a problem off from GDAL's own errors behind it: some cannot travel between worker processes."""
+    problem.__cause__ = problem.__context__ = None
+
+
 class OpenFiles:
     """Files of one owner, each opened once."""
 
@@ -30,7 +35,11 @@ class OpenFiles:
 
     def get(self, path: str) -> Any:
         if path not in self._open:
-            self._open[path] = open_raster(path)
+            try:
+                self._open[path] = open_raster(path)
+            except InputProblem as problem:
+                forget_trail(problem)
+                raise
         return self._open[path]
 
     def close(self) -> None:
@@ -96,9 +105,7 @@ def grid_ratio(grid: Grid, found: Grid, where: str, what: str) -> int:
     finer, coarser = round(grid.dx / found.dx), round(found.dx / grid.dx)
     if 1 < finer <= LARGEST_RATIO:
         ratio = finer
-        wanted = replace(
-            grid, dx=grid.dx / finer, dy=grid.dy / finer, rows=grid.rows * finer, cols=grid.cols * finer
-        )
+        wanted = replace(grid, dx=grid.dx / finer, dy=grid.dy / finer, rows=grid.rows * finer, cols=grid.cols * finer)
     elif 1 < coarser <= LARGEST_RATIO and grid.rows % coarser == 0 and grid.cols % coarser == 0:
         ratio = -coarser
         wanted = replace(
@@ -201,9 +208,7 @@ def _holds(kind: str, number: float) -> bool:
     return float(number).is_integer() and limits.min <= number <= limits.max
 
 
-def _scaling(
-    scene: Scene, source: BandSource, what: str, tag_scale: float, tag_offset: float
-) -> tuple[float, float]:
+def _scaling(scene: Scene, source: BandSource, what: str, tag_scale: float, tag_offset: float) -> tuple[float, float]:
     scale, offset = source.scale, source.offset
     # a GeoTIFF holds both tags or none, and 1 and 0 are not written: they cannot be told from "no tags"
     if (tag_scale, tag_offset) != (1.0, 0.0):

@@ -76,23 +76,17 @@ class _Properties(_Part):
     code: str | None = Field(None, validation_alias="proj:code")
     epsg: int | None = Field(None, validation_alias="proj:epsg")
     wkt2: str | None = Field(None, validation_alias="proj:wkt2")
-    transform: Annotated[list[_Finite], Field(min_length=6, max_length=9)] = Field(
-        validation_alias="proj:transform"
+    transform: Annotated[list[_Finite], Field(min_length=6, max_length=9)] = Field(validation_alias="proj:transform")
+    shape: Annotated[list[Annotated[int, Field(ge=1, le=1_000_000)]], Field(min_length=2, max_length=2)] = Field(
+        validation_alias="proj:shape"
     )
-    shape: Annotated[list[Annotated[int, Field(ge=1, le=1_000_000)]], Field(min_length=2, max_length=2)] = (
-        Field(validation_alias="proj:shape")
-    )
-    sun_elevation: Annotated[float, Field(ge=-90, le=90)] | None = Field(
-        None, validation_alias="view:sun_elevation"
-    )
+    sun_elevation: Annotated[float, Field(ge=-90, le=90)] | None = Field(None, validation_alias="view:sun_elevation")
     version: str = ""
     created: str = ""
     grid_code: str | None = Field(None, validation_alias="grid:code")
     tile: str | None = Field(None, validation_alias="firnlight:tile")
     level: str | None = Field(None, validation_alias="processing:level")
-    reflectance: Literal["surface", "top of atmosphere"] | None = Field(
-        None, validation_alias="firnlight:reflectance"
-    )
+    reflectance: Literal["surface", "top of atmosphere"] | None = Field(None, validation_alias="firnlight:reflectance")
 
 
 class _Item(_Part):
@@ -145,9 +139,7 @@ def _scene(item: _Item, item_path: str) -> Scene:
 
 def _as_problem(error: ValidationError, where: str) -> InputProblem:
     first = error.errors()[0]
-    name = ".".join(
-        str(part) for part in first["loc"] if not str(part).startswith(("constrained", "literal["))
-    )
+    name = ".".join(str(part) for part in first["loc"] if not str(part).startswith(("constrained", "literal[")))
     if first["type"] == "missing":
         return InputProblem(where, f"item, {name}", "nothing", "a value", f"add {name} to the item")
     found = repr(first["input"])
@@ -211,11 +203,12 @@ def _crs(code: str | None, epsg: int | None, wkt2: str | None) -> str:
             "add proj:code to the item's properties (or proj:wkt2 where the CRS has no code)",
         )
     try:
-        return crs_text(CRS.from_user_input(text), "")
+        crs = CRS.from_user_input(text)
     except CRSError:
-        raise InputProblem(
-            "", "item, CRS", text[:60], "a known CRS", "correct proj:code in the item"
-        ) from None
+        crs = None
+    if crs is None:  # raised out here, since PROJ's error cannot travel between worker processes
+        raise InputProblem("", "item, CRS", text[:60], "a known CRS", "correct proj:code in the item")
+    return crs_text(crs, "")
 
 
 def _grid(told: _Properties) -> Grid:
@@ -268,9 +261,7 @@ def local_path(href: str, folder: str) -> str:
             "item, href",
             repr(href[:200]),
             "the path of a local file, relative to the item or absolute",
-            "copy the file to this machine first and write its path"
-            if scheme
-            else "correct the href in the item",
+            "copy the file to this machine first and write its path" if scheme else "correct the href in the item",
         )
     return path
 
@@ -306,8 +297,7 @@ def _flags(facts: _Facts) -> bytes:
     kind = facts.data_type or ""
     if facts.bitfields:
         fields = tuple(
-            (one.name, one.offset, one.length, tuple((c.value, c.word) for c in one.classes))
-            for one in facts.bitfields
+            (one.name, one.offset, one.length, tuple((c.value, c.word) for c in one.classes)) for one in facts.bitfields
         )
         flags = flags_of_bitfields(fields, kind)
     else:
@@ -359,7 +349,5 @@ def _sources(
                 data_type=facts.data_type or "",
             )
     if any(math.isinf(one.nodata) for one in bands.values() if one.nodata is not None):
-        raise InputProblem(
-            "", "item, nodata", "an infinite number", "a number or nan", "correct nodata in the item"
-        )
+        raise InputProblem("", "item, nodata", "an infinite number", "a number or nan", "correct nodata in the item")
     return bands, tuple(quality), checksums

@@ -78,9 +78,7 @@ def _read(path: str) -> object:
         if not stat.S_ISREG(found.st_mode):  # never opened: the other end of a pipe may never come
             raise InputProblem(path, "item", "a pipe, folder or device", wanted, "replace it by a plain file")
         if found.st_size > LARGEST_FILE_BYTES:
-            raise InputProblem(
-                path, "item", f"{found.st_size} bytes", "under 1 GB", "split the item collection"
-            )
+            raise InputProblem(path, "item", f"{found.st_size} bytes", "under 1 GB", "split the item collection")
         with open(path, "rb") as stream:
             return json.loads(stream.read())
     except OSError as error:
@@ -101,11 +99,7 @@ def _bodies(path: str, strict: bool) -> list[object]:
             features: list[object] = body["features"]
             if strict:
                 return features
-            return [
-                one
-                for one in features
-                if isinstance(one, dict) and ("stac_version" in one or "assets" in one)
-            ]
+            return [one for one in features if isinstance(one, dict) and ("stac_version" in one or "assets" in one)]
         if body.get("type") not in ("Catalog", "Collection") and ("stac_version" in body or "assets" in body):
             return [body]
     if strict:

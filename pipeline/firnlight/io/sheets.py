@@ -18,8 +18,8 @@ import pyarrow.parquet as pq
 
 from firnlight.core.errors import InputProblem, SettingsProblem
 from firnlight.core.totals import Totals
-from firnlight.io.regions import ALL
 from firnlight.io.atomic import move_into_place, replacing, scratch_path
+from firnlight.io.regions import ALL
 
 STATES = ("snow-free", "snow", "unseen")
 _WIDE = pa.decimal128(38, 0)  # pyarrow's int64 sum wraps silently
@@ -84,7 +84,7 @@ def region_rows(table: Any, totals: Sequence[Totals]) -> list[Row]:
                 key = (region, stratum.land_cover, name, stratum.band_low_m, stratum.band_high_m)
                 sums[key] = sums[key] + one if key in sums else one
     names = {ALL: "", **table.region_names}
-    rows = [Row(k[0], names[k[0]], k[1], k[2], k[3], k[4], total) for k, total in sums.items()]  # type: ignore[arg-type, index]
+    rows = [Row(k[0], names[k[0]], k[1], k[2], k[3], k[4], total) for k, total in sums.items()]  # type: ignore[arg-type]
     return sorted(rows, key=lambda row: row.order)
 
 
@@ -105,7 +105,13 @@ class Sheet:
 
 
 def prepare_totals(
-    path: Path, table: Any, totals: Sequence[Totals], tile: str, day: dt.date, key: str, scenes: tuple[str, ...]
+    path: Path,
+    table: Any,
+    totals: Sequence[Totals],
+    tile: str,
+    day: dt.date,
+    key: str,
+    scenes: tuple[str, ...],
 ) -> Sheet:
     """Write the totals of a tile-day beside their final place; nothing is seen before `publish`."""
     rows = region_rows(table, totals)
@@ -168,7 +174,9 @@ def _guarded(value: object) -> object:
     return f"'{value}" if isinstance(value, str) and value[:1] in ("=", "+", "-", "@", "\t", "\r") else value
 
 
-def answer_bytes(rows: Sequence[Mapping[str, object]], units: Mapping[str, str], about: Mapping[str, object], ending: str) -> bytes:
+def answer_bytes(
+    rows: Sequence[Mapping[str, object]], units: Mapping[str, str], about: Mapping[str, object], ending: str
+) -> bytes:
     """A table as the bytes of a .csv, .json or .parquet file; empty where unknown.
 
     Raises
@@ -195,14 +203,25 @@ def answer_bytes(rows: Sequence[Mapping[str, object]], units: Mapping[str, str],
         sink = pa.BufferOutputStream()
         pq.write_table(table.cast(schema), sink, compression="zstd")
         return sink.getvalue().to_pybytes()
-    raise SettingsProblem("--out", "file ending", ending or "none", ".csv, .parquet or .json", "end the file name in one of them")
+    raise SettingsProblem(
+        "--out",
+        "file ending",
+        ending or "none",
+        ".csv, .parquet or .json",
+        "end the file name in one of them",
+    )
 
 
-def write_answer(path: Path, rows: Sequence[Mapping[str, object]], units: Mapping[str, str], about: Mapping[str, object]) -> None:
+def write_answer(
+    path: Path, rows: Sequence[Mapping[str, object]], units: Mapping[str, str], about: Mapping[str, object]
+) -> None:
     """Write a table; a CSV gets its units and description in a .json beside it."""
     data = answer_bytes(rows, units, about, path.suffix.lower())
     with replacing(path) as scratch:
         scratch.write_bytes(data)
     if path.suffix.lower() == ".csv":
         with replacing(path.with_suffix(".json")) as scratch:
-            scratch.write_text(json.dumps({**about, "units": dict(units)}, indent=1, ensure_ascii=False) + "\n", encoding="utf-8")
+            scratch.write_text(
+                json.dumps({**about, "units": dict(units)}, indent=1, ensure_ascii=False) + "\n",
+                encoding="utf-8",
+            )

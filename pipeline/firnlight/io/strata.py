@@ -134,9 +134,7 @@ class _Layers:
 
     def _band(self, height: NDArray[Any]) -> NDArray[np.int32]:
         """How many band edges lie at or below each height."""
-        low, high = (
-            (float(v) for v in (np.nanmin(height), np.nanmax(height))) if _any_number(height) else (0.0, 0.0)
-        )
+        low, high = (float(v) for v in (np.nanmin(height), np.nanmax(height))) if _any_number(height) else (0.0, 0.0)
         first, last = np.searchsorted(self._steps, (low, high), side="right")
         band = np.full(height.shape, first, np.int32)
         if last - first <= 40:  # a few comparisons are cheaper than a search per cell
@@ -170,9 +168,7 @@ def _open(path: str | Path | None, grid: Grid) -> Any:
     difference = grid.difference(dataset_grid(dataset))
     if difference:
         dataset.close()
-        raise InputProblem(
-            str(path), "grid", difference, "the tile's grid", "warp the raster to the tile's grid"
-        )
+        raise InputProblem(str(path), "grid", difference, "the tile's grid", "warp the raster to the tile's grid")
     return dataset
 
 
@@ -185,9 +181,7 @@ class _Sums:
         self.totals: list[list[int]] = []
         self.contested: dict[str, int] = {}
 
-    def add(
-        self, code: NDArray[np.int32], area_cm2: NDArray[np.int64], sets: list[CellSet]
-    ) -> NDArray[np.int32]:
+    def add(self, code: NDArray[np.int32], area_cm2: NDArray[np.int64], sets: list[CellSet]) -> NDArray[np.int32]:
         """Count a window; returns the provisional number of each code (1 + set, cover, band; 0 nobody)."""
         per_set = len(self._layers.covers) * len(self._layers.edges)
         flat, area = code.ravel().astype(np.intp), area_cm2.ravel()
@@ -195,11 +189,7 @@ class _Sums:
         cells = np.bincount(flat, minlength=size)
         # two limbs, each a whole number below 2^53 when summed over a window: exact in float64
         low = np.bincount(flat, area & ((1 << _LIMB_BITS) - 1), minlength=size)
-        high = (
-            np.bincount(flat, area >> _LIMB_BITS, minlength=size)
-            if (area >> _LIMB_BITS).any()
-            else np.zeros(size)
-        )
+        high = np.bincount(flat, area >> _LIMB_BITS, minlength=size) if (area >> _LIMB_BITS).any() else np.zeros(size)
         provisional = np.full(size, NOBODY, np.int32)
         for number in (np.flatnonzero(cells[1:]) + 1).tolist():
             which, rest = divmod(number - 1, per_set)
@@ -226,16 +216,12 @@ class _Sums:
             final[self._numbers[stratum]] = number
             strata.append(replace(stratum, area_cm2=area, cells=cells))
         used = sorted({ident for stratum in strata for ident in stratum.regions})
-        warnings = [
-            f"region {ident}: rings that cross or touch were mended" for ident in self._regions.repaired
-        ]
+        warnings = [f"region {ident}: rings that cross or touch were mended" for ident in self._regions.repaired]
         warnings += [
             f"region {parent}: {cells} cells lie in several of its parts; the first in the file has them"
             for parent, cells in sorted(self.contested.items())
         ]
-        return StrataTable(
-            key, tuple(strata), {ident: names[ident] for ident in used}, tuple(warnings)
-        ), final
+        return StrataTable(key, tuple(strata), {ident: names[ident] for ident in used}, tuple(warnings)), final
 
 
 def build_strata(
@@ -278,9 +264,7 @@ def build_strata(
             with rasterio.open(draft, "w", **profile) as dataset:
                 for window in grid.windows(WINDOW_ROWS, WINDOW_COLS):
                     lengths, numbers, sets = membership.runs(window)
-                    first = np.array(
-                        [n * per_set + 1 if one.ids else 0 for n, one in enumerate(sets)], np.int32
-                    )
+                    first = np.array([n * per_set + 1 if one.ids else 0 for n, one in enumerate(sets)], np.int32)
                     code = np.repeat(first[numbers], lengths).reshape(window.rows, window.cols)
                     mine = owner.mask(window) & (code > 0)
                     if not mine.any():
@@ -331,18 +315,14 @@ def outside_area_cm2(regions: Regions, grids: Mapping[str, Grid]) -> dict[str, i
     for grid in grids.values():
         by_crs.setdefault(grid.crs, []).append(shapely.box(grid.left, grid.bottom, grid.right, grid.top))
     # tiles of one CRS are joined before they are moved, so that no slit opens between neighbours
-    covered = shapely.union_all(
-        [polygons(on_plane(shapely.union_all(boxes), crs, plane)) for crs, boxes in by_crs.items()]
-    )
+    covered = shapely.union_all([polygons(on_plane(shapely.union_all(boxes), crs, plane)) for crs, boxes in by_crs.items()])
     outside, whole = {}, {}
     for region in with_shape:
         moved = polygons(on_plane(region.geometry, regions.crs, plane))
         outside[region.id], whole[region.id] = polygons(shapely.difference(moved, covered)), moved.area
 
     def reach(region: Region) -> Any:
-        return shapely.union_all(
-            [outside[region.id], *(reach(part) for part in regions.children.get(region.id, ()))]
-        )
+        return shapely.union_all([outside[region.id], *(reach(part) for part in regions.children.get(region.id, ()))])
 
     def assign(region: Region, allowed: Any) -> int:
         parts = regions.children.get(region.id, [])

@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
+import difflib
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from firnlight.core.errors import InputProblem
+from firnlight.core.errors import SettingsProblem
 from firnlight.core.tables import load_table
 
 Floats = NDArray[np.float64]
@@ -25,6 +26,7 @@ class Conversion:
     fit_error : standard uncertainty of the published fit. [1]
     substitution_error : added where the sensor's bands are not those of the fit. [1]
     reflectance : "surface" or "top of atmosphere": what the bands must hold.
+    surfaces : what the form holds for, in words; source : citation.
     """
 
     name: str
@@ -42,19 +44,25 @@ class Conversion:
 def conversion(family: str, sensor: str, quantity: str = "shortwave") -> Conversion:
     """The form of a family for a sensor.
 
+    Parameters
+    ----------
+    family : as in a workflow, for example "liang2001".
+    sensor : row of tables/sensors.toml, or a sensor that only conversions know.
+    quantity : "shortwave", "visible", "near_infrared", or these two with "diffuse_" or "direct_" before them.
+
     Raises
     ------
     InputProblem : no such family, or no form of it for that sensor and quantity.
+
+    References
+    ----------
+    tables/broadband.toml, each row its own.
     """
     rows = load_table("broadband").rows
     kin = {name: row for name, row in rows.items() if row["family"] == family}
     fitting = [name for name, row in kin.items() if sensor in row["sensors"] and row["quantity"] == quantity]
     if not fitting:
-        others = sorted({row["family"] for row in rows.values() if sensor in row["sensors"] and row["quantity"] == quantity})
-        raise InputProblem(
-            "workflow", "albedo.conversion", family, f"a {quantity} conversion for {sensor}: " + ", ".join(others),
-            f"choose one that is made for {sensor}; `firnlight methods` tells where each holds",
-        )  # fmt: skip
+        raise _no_form(family, sensor, quantity)
     name = fitting[0]
     row = kin[name]
     squares, products = row.get("squares", {}), row.get("products", [])
@@ -79,6 +87,34 @@ def conversion(family: str, sensor: str, quantity: str = "shortwave") -> Convers
         surfaces=row["surfaces"],
         source=row["source"],
     )
+
+
+def _no_form(family: str, sensor: str, quantity: str) -> InputProblem:
+    """What there is instead, in the family and for the sensor."""
+    rows = load_table("broadband").rows.values()
+    forms: dict[str, set[str]] = {}
+    usable = set()
+    for row in rows:
+        if row["family"] == family:
+            forms.setdefault(row["quantity"], set()).update(row["sensors"])
+        wrong_kind = row.get("reflectance", "surface") != "surface"
+        if sensor in row["sensors"] and row["quantity"] == quantity and not wrong_kind:
+            usable.add(row["family"])
+    if forms:
+        found = f"{family}, which has no {quantity} form for {sensor}"
+        has = "; ".join(f"{one} for {', '.join(sorted(sensors))}" for one, sensors in forms.items())
+        wanted = f"a form that it has: {has}"
+    else:
+        found = family
+        wanted = "one of " + ", ".join(sorted({row["family"] for row in rows}))
+    near = difflib.get_close_matches(family, usable, n=1)
+    if near:
+        fix = f"write {near[0]!r}"
+    elif usable:
+        fix = f"for {sensor} choose from: {', '.join(sorted(usable))}"
+    else:
+        fix = f"no conversion gives {quantity} from {sensor}; `firnlight methods` lists those there are"
+    return InputProblem("workflow", "albedo.conversion", found, wanted, fix)
 
 
 def albedo(reflectance: ArrayLike, form: Conversion) -> Floats:
@@ -108,7 +144,17 @@ def albedo(reflectance: ArrayLike, form: Conversion) -> Floats:
 
 
 def sensitivity(reflectance: ArrayLike, form: Conversion) -> Floats:
-    """Change of albedo per change of each band's reflectance: (bands, ...). [1]"""
+    """Change of albedo per change of each band's reflectance.
+
+    Parameters
+    ----------
+    reflectance : (bands, ...)   In the order of form.bands. [1]
+    form : the conversion.
+
+    Returns
+    -------
+    (bands, ...)   The weights; a quadratic form adds its slope, NaN where a band of it is NaN. [1]
+    """
     rho = np.asarray(reflectance, np.float64)
     linear = np.array(form.weights).reshape(-1, *(1,) * (rho.ndim - 1))
     slope = np.broadcast_to(linear, rho.shape).copy()

@@ -129,9 +129,7 @@ def relative_airmass(zenith_deg: ArrayLike) -> Floats:
     return np.asarray(1 / (np.cos(np.radians(up)) + a * (b - up) ** -c))
 
 
-def bird(
-    zenith_deg: ArrayLike, extraterrestrial_wm2: ArrayLike, pressure_pa: ArrayLike, atmosphere: Atmosphere
-) -> ClearSky:
+def bird(zenith_deg: ArrayLike, extraterrestrial_wm2: ArrayLike, pressure_pa: ArrayLike, atmosphere: Atmosphere) -> ClearSky:
     """Clear-sky irradiance on horizontal ground.
 
     Parameters

@@ -18,9 +18,7 @@ from firnlight.physics.clearsky import (  # noqa: E402
 
 
 @numba.njit(nogil=True, cache=True)
-def _moments(
-    declination, hour_at_zero, distance, parallax, latitude, longitude, pressure, air, numbers, scale, out
-):
+def _moments(declination, hour_at_zero, distance, parallax, latitude, longitude, pressure, air, numbers, scale, out):
     (r1, r2, r3, o1, o2, o3, o4, o5, o6, g1, g2, w1, w2, w3, w4, a1, a2, a3, a4, a5, k1, k2,
      direct_share, s1, s2, s3, sky0, p0, m1, m2, m3) = numbers  # fmt: skip
     aod500, aod380, water, ozone, forward = air

@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import difflib
+
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from firnlight.core.errors import InputProblem
+from firnlight.core.errors import SettingsProblem
 from firnlight.core.tables import load_table
 
 Floats = NDArray[np.float64]
@@ -25,13 +27,17 @@ def fraction_numbers(name: str) -> tuple[int, tuple[float, ...]]:
     ------
     InputProblem : no formula of that name.
     """
-    table = load_table("snow")
-    names = [key for key, row in table.rows.items() if row.get("kind") == "fraction"]
-    if name not in names:
+    rows = {key: row for key, row in load_table("snow").rows.items() if row.get("kind") == "fraction"}
+    if name not in rows:
+        near = difflib.get_close_matches(name, rows, n=1)
         raise InputProblem(
-            "workflow", "albedo.snow_fraction", name, "one of " + ", ".join(names), "see `firnlight methods` for what each is"
+            "workflow",
+            "albedo.snow_fraction",
+            name,
+            "one of " + ", ".join(rows),
+            f"write {near[0]!r}" if near else "see `firnlight methods` for what each is",
         )
-    row = table.row(name)
+    row = rows[name]
     return (LINEAR if row["formula"] == "linear" else TANH), tuple(row["numbers"])
 
 
@@ -57,7 +63,20 @@ def ndsi(green: ArrayLike, swir: ArrayLike) -> Floats:
 
 
 def is_snow(green: ArrayLike, nir: ArrayLike, swir: ArrayLike) -> NDArray[np.bool_]:
-    """Snow test on NDSI, near infrared and green; any shape; NaN is not snow. Limits: tables/snow.toml."""
+    """Does a cell pass the snow test on NDSI, near infrared and green?
+
+    Parameters
+    ----------
+    green, nir, swir : any shape   Surface reflectance near 0.55, 0.85 and 1.6 um. [1]
+
+    Returns
+    -------
+    that shape   NaN is not snow. Snow under trees mostly fails the test: it is not relaxed there.
+
+    References
+    ----------
+    Dozier (1989), Hall et al. (1995), tables/snow.toml.
+    """
     least, nir_limit, green_limit = snow_limits()
     return (ndsi(green, swir) >= least) & (np.asarray(nir) > nir_limit) & (np.asarray(green) > green_limit)
 
@@ -73,6 +92,18 @@ def snow_fraction(index: ArrayLike, name: str) -> Floats:
     Returns
     -------
     that shape, in 0..1; 0 where NDSI <= 0; NaN in gives NaN. [1]
+
+    Notes
+    -----
+    NDSI alone does not tell snow from dark water or shadow, whose index is high too: ask is_snow as well.
+
+    Raises
+    ------
+    InputProblem : no formula of that name.
+
+    References
+    ----------
+    tables/snow.toml, each row its own.
     """
     form, c = fraction_numbers(name)
     x = np.asarray(index, np.float64)

@@ -65,9 +65,7 @@ def ecliptic(unix_s: ArrayLike) -> tuple[Floats, Floats, Floats, Floats]:
     return ascension, declination, sidereal, d0 + d1 * np.cos(anomaly) + d2 * np.cos(2 * anomaly)
 
 
-def position(
-    unix_s: ArrayLike, latitude_deg: ArrayLike, longitude_deg: ArrayLike
-) -> tuple[Floats, Floats, Floats]:
+def position(unix_s: ArrayLike, latitude_deg: ArrayLike, longitude_deg: ArrayLike) -> tuple[Floats, Floats, Floats]:
     """Place of the sun in the sky.
 
     Parameters

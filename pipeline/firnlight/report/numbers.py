@@ -64,7 +64,10 @@ def budget_table(rows: Sequence[Mapping[str, object]], by: Sequence[str], severa
     add("albedo", [by_uncertainty(number(row, "albedo"), number(row, "albedo_u")) for row in rows])
     add("incoming W m-2", [plain(row["insolation_wm2"], 1) for row in rows])
     add("reflected W m-2", [plain(row["reflected_wm2"], 1) for row in rows])
-    add("absorbed W m-2", [by_uncertainty(number(row, "absorbed_wm2"), number(row, "absorbed_u")) for row in rows])
+    add(
+        "absorbed W m-2",
+        [by_uncertainty(number(row, "absorbed_wm2"), number(row, "absorbed_u")) for row in rows],
+    )
     add("absorbed GJ", [plain(row["absorbed_gj"], 0) for row in rows])
     widths = [max(len(title), *map(len, cells)) if cells else len(title) for title, cells in columns]
 

@@ -191,7 +191,17 @@ def _group_rows(
     enough = bool(whole.area) and whole.area / all_days >= least_coverage
     if not by_snow:
         numbers = _numbers(whole, enough)
-        return [("all", {**shares, **numbers, "area_km2": all_days / days / CM2_PER_KM2, "seen_km2": whole.area / days / CM2_PER_KM2})]
+        return [
+            (
+                "all",
+                {
+                    **shares,
+                    **numbers,
+                    "area_km2": all_days / days / CM2_PER_KM2,
+                    "seen_km2": whole.area / days / CM2_PER_KM2,
+                },
+            )
+        ]
     rows: list[tuple[str, Mapping[str, object]]] = []
     for state in ("snow", "snow-free"):
         one = ground.states.get(state, _EMPTY)
@@ -200,7 +210,17 @@ def _group_rows(
             rows.append((state, {**shares, **_numbers(one, enough), "area_km2": km2, "seen_km2": km2}))
     unseen = all_days - whole.area
     if unseen:
-        rows.append(("unseen", {**shares, **_numbers(_EMPTY, False), "area_km2": unseen / days / CM2_PER_KM2, "seen_km2": 0.0}))
+        rows.append(
+            (
+                "unseen",
+                {
+                    **shares,
+                    **_numbers(_EMPTY, False),
+                    "area_km2": unseen / days / CM2_PER_KM2,
+                    "seen_km2": 0.0,
+                },
+            )
+        )
     return rows
 
 

@@ -41,9 +41,12 @@ def check_inputs(workflow: Workflow, tell: Listener) -> Checked:
     # an empty ledger: every tile-day is looked at as if it were new
     ledger = Ledger(store.root / "no such ledger", read_only=True)
     try:
-        planner = Planner(workflow, store, ledger, worker_count(workflow.engine.workers))
+        return _check(Planner(workflow, store, ledger, worker_count(workflow.engine.workers)), tell)
     finally:
         ledger.close()
+
+
+def _check(planner: Planner, tell: Listener) -> Checked:
     problems: list[str] = []
     count, begun = 0, time.monotonic()
     due = planner.due(Span())

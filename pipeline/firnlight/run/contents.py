@@ -23,7 +23,13 @@ def _take(path: str, stated: str) -> _Row | InputProblem:
         taken = checked_content_id(Path(path), stated, path) if stated else content_id(Path(path))
         return path, found.st_size, found.st_mtime_ns, found.st_ino, stated, taken
     except OSError as error:
-        return InputProblem(path, "file", error.strerror or str(error), "a readable file", "deliver the file, or correct its path")
+        return InputProblem(
+            path,
+            "file",
+            error.strerror or str(error),
+            "a readable file",
+            "deliver the file, or correct its path",
+        )
     except InputProblem as problem:
         return problem
 
@@ -52,7 +58,9 @@ class Contents:
             else:
                 self._known[path, stated] = kept
         with ThreadPoolExecutor(workers) as pool:
-            for (path, stated), row in zip(unread, pool.map(_take, *zip(*unread, strict=True)) if unread else (), strict=True):
+            for (path, stated), row in zip(
+                unread, pool.map(_take, *zip(*unread, strict=True)) if unread else (), strict=True
+            ):
                 if isinstance(row, InputProblem):
                     self._known[path, stated] = row
                 else:

@@ -25,7 +25,10 @@ def worker_count(workers: int | str) -> int:
 
 
 def run_blocks(
-    work: Callable[[Window], None], windows: Iterable[Window], finishers: dict[str, Callable[[], Any]], workers: int
+    work: Callable[[Window], None],
+    windows: Iterable[Window],
+    finishers: dict[str, Callable[[], Any]],
+    workers: int,
 ) -> dict[str, Any]:
     """Run `work` on every window, then every finisher, as dask tasks on `workers` threads; the finishers' results.
 
@@ -102,7 +105,10 @@ def engine(settings: Engine, address: str | None = None) -> Iterator[Threads | C
     from distributed import Client, LocalCluster
 
     # the trim threshold that dask sets for its workers makes this work 1.4 times slower
-    calm = {"distributed.nanny.pre-spawn-environ.MALLOC_TRIM_THRESHOLD_": None, "distributed.admin.tick.limit": "60s"}
+    calm = {
+        "distributed.nanny.pre-spawn-environ.MALLOC_TRIM_THRESHOLD_": None,
+        "distributed.admin.tick.limit": "60s",
+    }
     if where == "processes":
         with (
             dask.config.set({k: v for k, v in calm.items() if v is not None}),

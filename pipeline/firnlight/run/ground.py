@@ -16,8 +16,8 @@ from firnlight.io.fingerprints import text_id
 from firnlight.io.ownership import neighbours
 from firnlight.io.rasters import grid_of
 from firnlight.io.regions import Regions, read_regions, whole_area
-from firnlight.io.strata import build_strata, outside_area_cm2, read_strata_table
 from firnlight.io.sheets import stratum_regions
+from firnlight.io.strata import build_strata, outside_area_cm2, read_strata_table
 from firnlight.run.contents import Contents
 from firnlight.run.store import Store
 
@@ -65,13 +65,18 @@ class Ground:
                 difference = grid.difference(grid_of(str(path))) if path else None
                 if difference:
                     raise InputProblem(
-                        str(path), "grid", difference, f"the grid of tile {tile}", "warp the raster to the tile's grid"
+                        str(path),
+                        "grid",
+                        difference,
+                        f"the grid of tile {tile}",
+                        "warp the raster to the tile's grid",
                     )
             elevation_id = self.contents.of(elevation) if elevation else ""
+            near = {tile, *neighbours(self.grids, tile)}
             facts = [
                 STRATA_VERSION, self._regions_facts, elevation_id, self.contents.of(land_cover) if land_cover else "",
                 sorted(self.workflow.surface.class_names.items()),
-                [[name, _place(self.grids[name])] for name in self.grids if name in {tile, *neighbours(self.grids, tile)}], tile,
+                [[name, _place(self.grids[name])] for name in self.grids if name in near], tile,
             ]  # fmt: skip
             self._tiles[tile] = TileGround(
                 places.centre_lonlat(grid), str(elevation) if elevation else None, elevation_id, text_id(json.dumps(facts))
@@ -94,7 +99,11 @@ class Ground:
         if settings.file is None:
             return whole_area(self.workflow.area.name)
         return read_regions(
-            self.workflow.path(settings.file), settings.layer, settings.id_field, settings.name_field, settings.parent_field
+            self.workflow.path(settings.file),
+            settings.layer,
+            settings.id_field,
+            settings.name_field,
+            settings.parent_field,
         )
 
     def prepare(self, tile: str) -> None:

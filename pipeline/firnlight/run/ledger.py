@@ -130,12 +130,15 @@ class Ledger:
             [(p.tile, p.day.isoformat(), p.name, p.path, p.key, p.size, p.mtime_ns, p.digest) for p in products],
         )
 
-    def record(self, tile: str, day: dt.date, products: Iterable[Product], scenes: str, finished: str, seconds: float) -> None:
+    def record(
+        self, tile: str, day: dt.date, products: Iterable[Product], scenes: str, finished: str, seconds: float
+    ) -> None:
         """Record the products of a tile-day, after they are in place."""
         with self._transaction() as db:
             self._put(db, products)
             db.execute(
-                "insert or replace into tile_day values (?, ?, ?, ?, ?)", (tile, day.isoformat(), scenes, finished, seconds)
+                "insert or replace into tile_day values (?, ?, ?, ?, ?)",
+                (tile, day.isoformat(), scenes, finished, seconds),
             )
             db.execute("delete from refusal where tile = ? and day = ?", (tile, day.isoformat()))
 
@@ -176,7 +179,8 @@ class Ledger:
     def runs(self, most: int = 10) -> list[tuple[object, ...]]:
         """The latest runs: started, finished, done, already, refused, failed, exit code."""
         return self._db.execute(
-            "select started, finished, done, already, refused, failed, exit_code from run order by id desc limit ?", (most,)
+            "select started, finished, done, already, refused, failed, exit_code from run order by id desc limit ?",
+            (most,),
         ).fetchall()
 
     def tile_days(self) -> list[tuple[str, dt.date, str, str, float]]:

@@ -13,7 +13,7 @@ from firnlight.core.errors import InputProblem, NoRoom
 from firnlight.core.settings import Workflow, load_workflow
 from firnlight.io.atomic import sweep
 from firnlight.io.fingerprints import content_id
-from firnlight.io.items import read_product_item
+from firnlight.io.items import Asset, read_product_item
 from firnlight.run.engine import engine, worker_count
 from firnlight.run.ledger import Ledger, Product, Refusal
 from firnlight.run.plan import Decision, Planner, Span
@@ -63,13 +63,14 @@ def _now() -> str:
     return dt.datetime.now(dt.UTC).isoformat(timespec="seconds")
 
 
-def plan_night(workflow: Workflow, span: Span) -> tuple[list[Decision], list[Refusal]]:
-    """What a night would do; reads inputs, writes nothing."""
+def plan_night(workflow: Workflow, span: Span, look_only: bool = False) -> tuple[list[Decision], list[Refusal]]:
+    """What a night would do; reads inputs, writes nothing. `look_only` lists what is due and reads no raster."""
     store = Store(workflow.path(workflow.store.path))
     ledger = Ledger(store.ledger, read_only=True)
     try:
         planner = Planner(workflow, store, ledger, worker_count(workflow.engine.workers))
-        decisions = [planner.decide(tile, day) for tile, day in planner.due(span)]
+        due = planner.due(span)
+        decisions = [] if look_only else [planner.decide(tile, day) for tile, day in due]
         return decisions, planner.refusals
     finally:
         ledger.close()
@@ -98,6 +99,8 @@ def run_night(
     """
     settings = workflow if isinstance(workflow, Workflow) else load_workflow(Path(workflow))
     store = Store(settings.path(settings.store.path))
+    if not store.root.exists():
+        plan_night(settings, span, look_only=True)  # settings that cannot be used leave no empty store behind
     store.make()
     with store.held(wait):
         fresh = not store.ledger.exists()
@@ -155,13 +158,23 @@ def _run(
     outcome.refusals = planner.refusals
     outcome.seconds = time.monotonic() - begun
     ledger.end_run(
-        run, _now(), len(outcome.made), len(outcome.already), len(outcome.refusals), len(outcome.failed), outcome.exit_code
+        run,
+        _now(),
+        len(outcome.made),
+        len(outcome.already),
+        len(outcome.refusals),
+        len(outcome.failed),
+        outcome.exit_code,
     )
     return outcome
 
 
 def _take(
-    decision: Decision, jobs: dict[str, TileJob], outcome: Outcome, ledger: Ledger, block: tuple[int, int] | None
+    decision: Decision,
+    jobs: dict[str, TileJob],
+    outcome: Outcome,
+    ledger: Ledger,
+    block: tuple[int, int] | None,
 ) -> None:
     name = f"{decision.tile} {decision.day.isoformat()}"
     if decision.job is not None:
@@ -172,9 +185,7 @@ def _take(
             ledger.record_products(decision.touched)
 
 
-def _record(
-    name: str, job: TileJob, result: object, planner: Planner, ledger: Ledger, outcome: Outcome
-) -> TileJob | None:
+def _record(name: str, job: TileJob, result: object, planner: Planner, ledger: Ledger, outcome: Outcome) -> TileJob | None:
     """Write down how a job ended; the job again, where it must be planned without a spoiled scene."""
     if isinstance(result, Made) and result.problem is None:
         scenes = " ".join(scene.id for scene in job.scenes)
@@ -211,14 +222,17 @@ def rebuild_ledger(store: Store, ledger: Ledger) -> int:
             item = read_product_item(path)
         except InputProblem:
             continue
-        found = []
-        for asset in item.assets:
-            if asset.path.is_file() and asset.path.stat().st_size == asset.size and content_id(asset.path) == asset.digest:
-                found.append(_product(store, tile, day, asset.name, asset.path.resolve(), asset.key, asset.digest))
+        whole = [one for one in item.assets if _is_whole(one)]
+        found = [_product(store, tile, day, one.name, one.path.resolve(), one.key, one.digest) for one in whole]
         found.append(_product(store, tile, day, ITEM, path.resolve(), item.key, content_id(path)))
         ledger.record(tile, day, found, " ".join(item.scenes), "rebuilt", 0.0)
         count += len(found)
     return count
+
+
+def _is_whole(asset: Asset) -> bool:
+    path = asset.path
+    return path.is_file() and path.stat().st_size == asset.size and content_id(path) == asset.digest
 
 
 def _product(store: Store, tile: str, day: dt.date, name: str, path: Path, key: str, digest: str) -> Product:

@@ -84,7 +84,7 @@ class Planner:
         self.refusals += [Refusal(problem.where, str(problem)) for problem in problems]
         if not scenes and not problems:
             raise SettingsProblem(
-                str(self.workflow.file), "scenes.items", self.workflow.scenes.items, "a folder, glob or file with STAC items",
+                str(self.workflow.file), "scenes.items", self.workflow.scenes.items, "a folder or file with STAC items",
                 "correct the path, or write items for plain rasters with `firnlight describe`",
             )  # fmt: skip
         found: dict[tuple[str, dt.date], list[Scene]] = {}
@@ -159,10 +159,7 @@ class Planner:
         self.contents.take(pairs, self.workers)
 
     def _files(self, scene: Scene) -> list[tuple[str, str]]:
-        try:
-            bands = self.numbers(scene.sensor).bands
-        except InputProblem:
-            return []
+        bands = self.numbers(scene.sensor).bands
         paths = [scene.bands[band].path for band in bands if band in scene.bands]
         paths += [quality.path for quality in scene.quality]
         return [(path, scene.checksums.get(path, "")) for path in dict.fromkeys(paths)]
@@ -185,6 +182,8 @@ class Planner:
                         "deliver the scene on the tile's grid, or give it another tile name",
                     )  # fmt: skip
                 good[scene.id] = self._content(scene)
+            except SettingsProblem:
+                raise
             except InputProblem as problem:
                 self.refuse(scene, problem)
         return good
@@ -204,9 +203,19 @@ class Planner:
             ident = self.contents.of(source.path, scene.checksums.get(source.path, ""))
             bands.append([name, ident, source.band, source.scale, source.offset, source.nodata])
         quality = [
-            [self.contents.of(q.path, scene.checksums.get(q.path, "")), q.band, text_id(q.flags.hex())] for q in scene.quality
+            [self.contents.of(q.path, scene.checksums.get(q.path, "")), q.band, text_id(q.flags.hex())]
+            for q in scene.quality
         ]
-        return digest([scene.sensor, scene.datetime.isoformat(), list(scene.grid.transform), scene.grid.crs, bands, quality])
+        return digest(
+            [
+                scene.sensor,
+                scene.datetime.isoformat(),
+                list(scene.grid.transform),
+                scene.grid.crs,
+                bands,
+                quality,
+            ]
+        )
 
     def _compare(self, tile: str, day: dt.date, contents: dict[str, str]) -> Decision:
         if not contents:
@@ -245,9 +254,7 @@ class Planner:
 
     def _keys(self, tile: str, strata_key: str, contents: list[str], numbers: tuple[AlbedoNumbers, ...]) -> dict[str, str]:
         grid = self.ground.grids[tile]
-        facts: dict[str, object] = {
-            name: [one.facts()[name] for one in numbers] for name in numbers[0].facts()
-        }
+        facts: dict[str, object] = {name: [one.facts()[name] for one in numbers] for name in numbers[0].facts()}
         facts["insolation"] = insolation_facts(self.workflow.insolation)
         facts["sky_error"] = self.workflow.insolation.relative_uncertainty
         place = [grid.crs, list(grid.transform), list(grid.shape)]

@@ -6,6 +6,7 @@ import sys
 from collections.abc import Callable
 from dataclasses import dataclass
 from types import TracebackType
+from typing import Any
 
 
 @dataclass(frozen=True)
@@ -36,7 +37,7 @@ class Teller:
 
     def __init__(self, quiet: bool = False) -> None:
         self._quiet = quiet
-        self._bar = None
+        self._bar: Any = None
 
     def __enter__(self) -> Teller:
         return self

@@ -39,7 +39,8 @@ class StoreStatus:
             "done": [f"{one.tile} {one.day}" for one in self.decisions if one.what == "done"],
             "waiting": [{"tile": one.tile, "day": one.day.isoformat(), "reason": one.reason} for one in self.waiting],
             "refused": [
-                {"input": one.subject, "reason": one.reason, "since": one.since, "retry": self.retry(one)} for one in self.refusals
+                {"input": one.subject, "reason": one.reason, "since": one.since, "retry": self.retry(one)}
+                for one in self.refusals
             ],
         }  # fmt: skip
 

@@ -66,7 +66,11 @@ class Store:
                 raise PermissionError(f"no permission to write in {self.root}")
         except OSError as error:
             raise SettingsProblem(
-                "workflow", "store.path", str(error), "a folder that can be written", "correct store.path or its rights"
+                "workflow",
+                "store.path",
+                str(error),
+                "a folder that can be written",
+                "correct store.path or its rights",
             ) from error
 
     def need_room(self, needed_bytes: int) -> None:
@@ -90,7 +94,9 @@ class Store:
         try:
             lock.acquire()
         except Timeout:
-            raise StoreBusy(f"{self.root}: another run holds this store; try again when it has ended, or use --wait") from None
+            raise StoreBusy(
+                f"{self.root}: another run holds this store; try again when it has ended, or use --wait"
+            ) from None
         try:
             yield
         finally:

@@ -8,7 +8,6 @@ import threading
 import time
 from dataclasses import dataclass, replace
 from functools import partial
-
 from typing import Any
 
 import numpy as np
@@ -218,7 +217,11 @@ def _product(job: TileJob, name: str, digest: str) -> Product:
 
 
 def _publish(
-    job: TileJob, table: Any, summary: Summary | None, writers: dict[str, CogWriter], written: dict[str, Written]
+    job: TileJob,
+    table: Any,
+    summary: Summary | None,
+    writers: dict[str, CogWriter],
+    written: dict[str, Written],
 ) -> list[Product]:
     products = []
     sheet = None
@@ -265,5 +268,3 @@ def write_item(job: TileJob, products: list[Product]) -> None:
 def job_call(job: TileJob) -> Any:
     """The job as a function of the number of threads, ready to travel."""
     return partial(run_tile_day, job)
-
-

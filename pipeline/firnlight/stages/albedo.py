@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from firnlight.core.errors import InputProblem
+from firnlight.core.errors import SettingsProblem
 from firnlight.core.layers import layer
 from firnlight.core.settings import Albedo
 from firnlight.core.tables import load_table
@@ -95,14 +95,14 @@ def albedo_numbers(settings: Albedo, sensor: str, reflectance: str = "surface") 
 
     Raises
     ------
-    InputProblem : no such conversion, no form of it for this sensor, or it is made for another kind of reflectance.
+    SettingsProblem : no such conversion, no form of it for this sensor, or it is made for another kind of reflectance.
     """
     row = load_table("sensors").row(sensor)
     forms = []
     for surface in ("ground", "snow"):
         one = conversion(getattr(settings.conversion, surface), sensor, "shortwave")
         if one.reflectance != reflectance:
-            raise InputProblem(
+            raise SettingsProblem(
                 "workflow", f"albedo.conversion.{surface}", one.name, f"a conversion of {reflectance} reflectance",
                 "see `firnlight methods` for what each conversion is made for",
             )  # fmt: skip
@@ -110,7 +110,7 @@ def albedo_numbers(settings: Albedo, sensor: str, reflectance: str = "surface") 
     ground, snow = forms
     has_snow_test = all(name in row["bands"] for name in SNOW_BANDS)
     if not has_snow_test and ground != snow:
-        raise InputProblem(
+        raise SettingsProblem(
             "workflow", "albedo.conversion.snow", snow.name, f"the same conversion for snow and ground with {sensor}",
             f"{sensor} has no bands for the snow test: give snow and ground one conversion",
         )  # fmt: skip
@@ -149,5 +149,3 @@ def empty_layers(shape: tuple[int, int]) -> dict[str, NDArray[Any]]:
         "snow_fraction": np.empty(shape, np.int16),
         "quality": np.empty(shape, np.uint8),
     }
-
-

@@ -37,7 +37,12 @@ def product_keys(
     keys: dict[str, str] = {}
     for stage in STAGES:
         key = digest(
-            [stage.name, stage.version, [[n, known[n]] for n in stage.needs], [[f, facts[f]] for f in stage.facts]]
+            [
+                stage.name,
+                stage.version,
+                [[n, known[n]] for n in stage.needs],
+                [[f, facts[f]] for f in stage.facts],
+            ]
         )
         for name in stage.makes:
             # the definition of a layer (step, nodata, unit) is part of what its integers mean
@@ -83,7 +88,9 @@ def merge(scenes: list[Blocks]) -> Blocks:
     return first
 
 
-def flux_layers(blocks: Blocks, elevation_m: NDArray[np.float32], window: Window, sky: SkyLattice, relative_u: float) -> None:
+def flux_layers(
+    blocks: Blocks, elevation_m: NDArray[np.float32], window: Window, sky: SkyLattice, relative_u: float
+) -> None:
     """Add insolation, absorbed shortwave and its uncertainty to the blocks of a window."""
     shape = blocks["albedo"].shape
     made = {name: np.empty(shape, np.int16) for name in ("insolation", "absorbed_shortwave", "absorbed_shortwave_u")}

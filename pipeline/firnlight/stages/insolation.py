@@ -67,7 +67,11 @@ def levels_m() -> NDArray[np.float64]:
 
 
 def sky_lattice(
-    day: dt.date, times_unix_s: tuple[float, ...], longitude_deg: Lattice, latitude_deg: Lattice, settings: Insolation
+    day: dt.date,
+    times_unix_s: tuple[float, ...],
+    longitude_deg: Lattice,
+    latitude_deg: Lattice,
+    settings: Insolation,
 ) -> SkyLattice:
     """Work out sun and sky at the nodes of a tile.
 
@@ -81,7 +85,10 @@ def sky_lattice(
     moments = day_moments(day, lat.ravel(), lon.ravel(), levels_m(), atmosphere(settings.atmosphere), orders=ORDERS)
     zenith = tuple(np.asarray(sun.position(time, lat, lon)[0]) for time in times_unix_s)
     return SkyLattice(
-        longitude_deg.row_step, longitude_deg.col_step, moments.reshape(*lon.shape, len(levels_m()), ORDERS), zenith
+        longitude_deg.row_step,
+        longitude_deg.col_step,
+        moments.reshape(*lon.shape, len(levels_m()), ORDERS),
+        zenith,
     )
 
 

@@ -6,5 +6,9 @@ from firnlight.stages.stage import Stage
 
 RADIATION = Stage("absorbed shortwave", 1, ("albedo", "insolation"), ("absorbed_shortwave",), ())
 RADIATION_U = Stage(
-    "absorbed shortwave uncertainty", 1, ("albedo", "albedo_u", "insolation"), ("absorbed_shortwave_u",), ("sky_error",)
+    "absorbed shortwave uncertainty",
+    1,
+    ("albedo", "albedo_u", "insolation"),
+    ("absorbed_shortwave_u",),
+    ("sky_error",),
 )

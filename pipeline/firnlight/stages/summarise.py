@@ -59,8 +59,11 @@ class Summary:
     def totals(self) -> list[Totals]:
         """Totals per stratum and state (snow-free, snow, unseen): 3 x n_strata, in that order."""
 
-        def whole(pairs: NDArray[np.int64], row: int) -> list[int]:
-            return [sum((int(s[row, k, 0]) << zones.LIMB_BITS) + int(s[row, k, 1]) for s in pairs) for k in range(pairs[0].shape[1])]
+        def whole(pairs: list[NDArray[np.int64]], row: int) -> list[int]:
+            return [
+                sum((int(s[row, k, 0]) << zones.LIMB_BITS) + int(s[row, k, 1]) for s in pairs)
+                for k in range(pairs[0].shape[1])
+            ]
 
         seen, unseen, histograms = ([s[n] for s in self._all] for n in range(3))
         out = []
@@ -68,7 +71,9 @@ class Summary:
             for snow in range(2):
                 row = stratum * 2 + snow
                 sums = dict(zip(zones.SEEN, whole(seen, row), strict=True)) if seen else {}
-                bins = [int(sum(h[row, b] for h in histograms)) for b in range(zones.ALBEDO_BINS)] if sums.get("cells") else []
+                bins = (
+                    [int(sum(h[row, b] for h in histograms)) for b in range(zones.ALBEDO_BINS)] if sums.get("cells") else []
+                )
                 out.append(Totals.seen(sums, tuple(bins)))
             sums = dict(zip(zones.UNSEEN, whole(unseen, stratum), strict=True)) if unseen else {}
             out.append(Totals.unseen(sums))
