@@ -49,13 +49,9 @@ def test_a_real_level_1_clip_needs_a_word_and_then_gives_sensible_albedo(clip, t
     workflow.write_text(text.replace("[store]", 'reflectance = "top of atmosphere"\n[store]'), encoding="utf-8")
     assert main(["night", str(workflow)]) == 2  # Liang (2001) is not made for it
     assert "a conversion of top of atmosphere reflectance" in capsys.readouterr().err
-    workflow.write_text(
-        text.replace(
-            "[store]",
-            'reflectance = "top of atmosphere"\n[albedo]\nconversion = { ground = "dasilva2016", snow = "dasilva2016" }\n[store]',
-        ),
-        encoding="utf-8",
-    )
+    forms = '[albedo]\nconversion = { ground = "dasilva2016", snow = "dasilva2016" }'
+    planetary = text.replace("[store]", f'reflectance = "top of atmosphere"\n{forms}\n[store]')
+    workflow.write_text(planetary, encoding="utf-8")
     assert main(["night", str(workflow)]) == 0
     with rasterio.open(next((tmp_path / "store").rglob("albedo.tif"))) as dataset:
         stored = dataset.read(1)

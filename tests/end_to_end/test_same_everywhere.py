@@ -1,5 +1,6 @@
 """Do threads, block sizes and a real cluster give the same bytes?"""
 
+import json
 import shutil
 
 import pytest
@@ -47,6 +48,23 @@ def test_a_scheduler_by_address_changes_no_byte(area, expected):
     with LocalCluster(n_workers=2, threads_per_worker=1, host="127.0.0.1", dashboard_address=None) as cluster:
         assert run_night(area.workflow, cluster=cluster.scheduler_address).exit_code == 0
     assert results(area) == expected
+
+
+@pytest.mark.cluster
+def test_a_truncated_scene_is_refused_by_a_worker_process_too(area):
+    item = area.items()[0]
+    body = json.loads(item.read_text(encoding="utf-8"))
+    body["assets"]["red"].pop("file:checksum")
+    item.write_text(json.dumps(body), encoding="utf-8")
+    for path in (item.parent / "red.tif", area.folder / "static/FELL-B/elevation.tif"):
+        path.write_bytes(path.read_bytes()[: path.stat().st_size * 2 // 3])
+    area.edit('run_on = "threads"', 'run_on = "processes"')
+    area.edit("workers = ", "workers = 2 #")
+    code, _, err = area.run("night")
+    assert code == 3
+    assert "red.tif" in err
+    assert "elevation.tif" in err
+    assert "setter" not in err
 
 
 @pytest.mark.cluster

@@ -52,7 +52,7 @@ def conversion(family: str, sensor: str, quantity: str = "shortwave") -> Convers
 
     Raises
     ------
-    InputProblem : no such family, or no form of it for that sensor and quantity.
+    SettingsProblem : no such family, or no form of it for that sensor and quantity.
 
     References
     ----------
@@ -89,7 +89,7 @@ def conversion(family: str, sensor: str, quantity: str = "shortwave") -> Convers
     )
 
 
-def _no_form(family: str, sensor: str, quantity: str) -> InputProblem:
+def _no_form(family: str, sensor: str, quantity: str) -> SettingsProblem:
     """What there is instead, in the family and for the sensor."""
     rows = load_table("broadband").rows.values()
     forms: dict[str, set[str]] = {}
@@ -114,7 +114,7 @@ def _no_form(family: str, sensor: str, quantity: str) -> InputProblem:
         fix = f"for {sensor} choose from: {', '.join(sorted(usable))}"
     else:
         fix = f"no conversion gives {quantity} from {sensor}; `firnlight methods` lists those there are"
-    return InputProblem("workflow", "albedo.conversion", found, wanted, fix)
+    return SettingsProblem("workflow", "albedo.conversion", found, wanted, fix)
 
 
 def albedo(reflectance: ArrayLike, form: Conversion) -> Floats:

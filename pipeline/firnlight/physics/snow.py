@@ -25,12 +25,12 @@ def fraction_numbers(name: str) -> tuple[int, tuple[float, ...]]:
 
     Raises
     ------
-    InputProblem : no formula of that name.
+    SettingsProblem : no formula of that name.
     """
     rows = {key: row for key, row in load_table("snow").rows.items() if row.get("kind") == "fraction"}
     if name not in rows:
         near = difflib.get_close_matches(name, rows, n=1)
-        raise InputProblem(
+        raise SettingsProblem(
             "workflow",
             "albedo.snow_fraction",
             name,
@@ -99,7 +99,7 @@ def snow_fraction(index: ArrayLike, name: str) -> Floats:
 
     Raises
     ------
-    InputProblem : no formula of that name.
+    SettingsProblem : no formula of that name.
 
     References
     ----------

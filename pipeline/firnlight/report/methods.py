@@ -233,7 +233,8 @@ def _sensor_lines(entries: list[Entry], full: bool) -> Iterator[str]:
         yield from _wrapped(f"{one['name']}: {one['title']}", 2)
         if full:
             for band, about in one["bands"].items():
-                yield f"    {band:<9} band {about['number']:<3} {about['low_um']:.3f}-{about['high_um']:.3f} um,  noise {about['noise']}"
+                span = f"{about['low_um']:.3f}-{about['high_um']:.3f} um"
+                yield f"    {band:<9} band {about['number']:<3} {span},  noise {about['noise']}"
             yield from _wrapped(f"noise: {one['noise_basis']}", 4)
             yield from _wrapped(f"calibration {one['calibration']:.0%} of reflectance: {one['calibration_basis']}", 4)
             yield from _wrapped(f"sun zenith at most {one['largest_sun_zenith_deg']:g} deg: {one['zenith_basis']}", 4)

@@ -9,7 +9,7 @@ import traceback
 from dataclasses import dataclass, field
 from pathlib import Path
 
-from firnlight.core.errors import InputProblem, NoRoom
+from firnlight.core.errors import InputProblem, NoRoom, SettingsProblem
 from firnlight.core.settings import Workflow, load_workflow
 from firnlight.io.atomic import sweep
 from firnlight.io.fingerprints import content_id
@@ -123,17 +123,28 @@ def _run(
     due = planner.due(span)
     jobs: dict[str, TileJob] = {}
     for tile, day in due:
-        _take(planner.decide(tile, day), jobs, outcome, ledger, block)
+        try:
+            _take(planner.decide(tile, day), jobs, outcome, ledger, block)
+        except SettingsProblem:
+            raise
+        except InputProblem as problem:  # the tile's ground; other tiles go on
+            planner.refusals.append(Refusal(f"{tile} {day}", str(problem), day, tile))
     planner.contents.keep()
     ledger.record_refusals(planner.refusals, started, due)
     if not jobs:
         outcome.refusals = planner.refusals
         outcome.seconds = time.monotonic() - begun
         return outcome
+    _ = planner.ground.regions  # polygons that cannot be used stop the night before anything is written
     sweep(store.root)
     store.need_room(max(job.grid.rows * job.grid.cols for job in jobs.values()) * BYTES_PER_CELL)
     for tile in sorted({job.tile for job in jobs.values()}):
-        planner.ground.prepare(tile)
+        try:
+            planner.ground.prepare(tile)
+        except InputProblem as problem:
+            for name in [name for name, job in jobs.items() if job.tile == tile]:
+                job = jobs.pop(name)
+                planner.refusals.append(Refusal(name, str(problem), job.day, tile))
     planner.ground.note_outside()
     run = ledger.start_run("night", started)
     total, done = len(jobs), 0

@@ -24,6 +24,7 @@ from firnlight.io.fingerprints import content_id
 from firnlight.io.ground import areas, cell_areas_cm2, cell_size_m, positions
 from firnlight.io.items import Asset, product_item
 from firnlight.io.rasters import open_raster, read_window
+from firnlight.io.scene_files import forget_trail
 from firnlight.io.scenes import Scene
 from firnlight.io.strata import read_strata_table
 from firnlight.run.engine import run_blocks
@@ -110,7 +111,12 @@ def run_tile_day(job: TileJob, threads: int) -> Made:
     try:
         return Made(products=tuple(_make(job, threads)), seconds=time.monotonic() - begun)
     except _SceneProblem as spoiled:
+        forget_trail(spoiled.problem)
         return Made(scene=spoiled.scene, problem=spoiled.problem)
+    except InputProblem as problem:
+        found = problem
+    forget_trail(found)
+    raise found
 
 
 def _make(job: TileJob, threads: int) -> list[Product]:

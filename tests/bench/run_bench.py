@@ -1,0 +1,102 @@
+"""How long does a night on one large tile take beside decoding its inputs and encoding its outputs alone?
+
+Run: .venv/bin/python tests/bench/run_bench.py [--size 10980] [--rounds 3]
+Prints, from one run and in turn: (a) the floor: decode all inputs, encode all outputs, same codec and threads;
+(b) `firnlight night` as a whole process with kernels compiled; peak memory of b; the ratio of the medians.
+"""
+
+from __future__ import annotations
+
+import argparse
+import json
+import os
+import platform
+import shutil
+import statistics
+import subprocess
+import sys
+import tempfile
+import time
+from concurrent.futures import ThreadPoolExecutor
+from pathlib import Path
+
+import numpy as np
+import rasterio
+from rasterio.windows import Window
+
+from firnlight.core.grid import Grid
+from firnlight.core.layers import layer, layer_names
+from firnlight.io.cog import CogWriter
+from firnlight.io.rasters import grid_of
+
+BLOCK = (512, 2048)
+
+
+def night(folder: Path) -> tuple[float, float]:
+    """Seconds and peak resident MiB of a night on an empty store."""
+    shutil.rmtree(folder / "store", ignore_errors=True)
+    begun = time.perf_counter()
+    command = [sys.executable, "-m", "firnlight", "night", str(folder / "workflow.toml"), "--quiet"]
+    process = subprocess.Popen(command, stdout=subprocess.DEVNULL)
+    _, status, usage = os.wait4(process.pid, 0)
+    if status:
+        raise SystemExit(f"the night ended with status {status}")
+    return time.perf_counter() - begun, usage.ru_maxrss / 1024
+
+
+def floor(folder: Path, workers: int) -> float:
+    """Seconds to decode every input once and to encode the night's own outputs once."""
+    inputs = sorted((folder / "scenes").rglob("*.tif")) + sorted((folder / "static").rglob("*.tif"))
+    maps = next((folder / "store/maps").glob("*/*"))
+    grid: Grid = grid_of(inputs[0])
+    windows = list(grid.windows(*BLOCK))
+    cells = {}
+    for name in layer_names():
+        with rasterio.open(maps / f"{name}.tif") as dataset:
+            cells[name] = dataset.read()
+    begun = time.perf_counter()
+
+    def decode(path: Path) -> None:
+        with rasterio.open(path, sharing=False) as dataset:
+            for w in windows:
+                dataset.read(1, window=Window(w.col, w.row, w.cols, w.rows))
+
+    def encode(name: str) -> None:
+        writer = CogWriter(folder / "floor" / f"{name}.tif", layer(name), grid, {})
+        for w in windows:
+            writer.write(w, cells[name][(slice(None), *w.slices)])
+        writer.finish()
+        writer.discard()
+
+    with ThreadPoolExecutor(workers) as pool:
+        list(pool.map(decode, inputs))
+        list(pool.map(encode, layer_names()))
+    return time.perf_counter() - begun
+
+
+def main() -> None:
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("--size", type=int, default=10980)
+    parser.add_argument("--rounds", type=int, default=3)
+    chosen = parser.parse_args()
+    workers = len(os.sched_getaffinity(0))
+    with tempfile.TemporaryDirectory() as scratch:
+        folder = Path(scratch) / "area"
+        demo = ["demo", str(folder), "--tiles", "1", "--size", str(chosen.size), "--scenes", "1"]
+        subprocess.run([sys.executable, "-m", "firnlight", *demo], check=True, stdout=subprocess.DEVNULL)
+        night(folder)  # compiles the kernels
+        nights, peaks, floors = [], [], []
+        for _ in range(chosen.rounds):
+            floors.append(floor(folder, workers))
+            seconds, peak = night(folder)
+            nights.append(seconds)
+            peaks.append(peak)
+    a, b = statistics.median(floors), statistics.median(nights)
+    print(json.dumps({"size": chosen.size, "workers": workers, "machine": platform.processor() or platform.machine()}))
+    print(f"(a) decode inputs + encode outputs alone: {a:.1f} s (of {[round(x, 1) for x in floors]})")
+    print(f"(b) firnlight night, whole process:       {b:.1f} s (of {[round(x, 1) for x in nights]})")
+    print(f"b / a = {b / a:.2f};  peak memory of b: {np.max(peaks):.0f} MiB")
+
+
+if __name__ == "__main__":
+    main()
