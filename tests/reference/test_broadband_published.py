@@ -1,6 +1,7 @@
 """Do the conversions give the values that their published coefficients give by hand, and fit spectra made elsewhere?"""
 
 import csv
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -46,7 +47,7 @@ def test_values_worked_out_by_hand(family, sensor, quantity, snow, vegetation, i
 
 
 def test_knap_keeps_the_square_of_its_last_term():
-    # Knap, Reijmer & Oerlemans (1999), doi:10.1080/014311699212362; texts that lose the square give 0.63 for snow
+    # Knap, Reijmer & Oerlemans (1999), doi:10.1080/014311699212362; texts that lose the square give 0.849 for snow
     form = conversion("knap1999", "tm")
     assert value(SPECTRA["snow"], form) == pytest.approx(0.756522, abs=5e-7)
     assert value(SPECTRA["ice"], form) == pytest.approx(0.298451, abs=5e-7)
@@ -151,3 +152,102 @@ def test_every_row_says_what_it_holds_for_and_who_published_it():
         assert row["fit_error"] > 0
         assert row["surfaces"]
         assert row["source"]
+
+
+@pytest.mark.parametrize(
+    ("family", "sensor", "quantity", "intercept"),
+    [
+        ("liang2001", "tm", "shortwave", -0.0018),
+        ("liang2001", "tm", "near_infrared", -0.003),
+        ("liang2001", "modis", "shortwave", -0.0015),
+        ("liang2001", "avhrr", "shortwave", 0.0035),
+        ("liang2001", "avhrr", "visible", 0.0074),
+        ("liang2001", "aster", "shortwave", -0.0015),
+        ("liang1999", "modis", "shortwave", 0.0036),
+        ("stroeve2005", "modis", "shortwave", -0.0093),
+        ("li2018", "msi", "shortwave", -0.0049),
+        ("knap1999", "tm", "shortwave", 0.0),
+    ],
+)
+def test_a_black_target_gives_the_printed_intercept(family, sensor, quantity, intercept):
+    form = conversion(family, sensor, quantity)
+    assert float(albedo(np.zeros(len(form.bands)), form)) == intercept
+
+
+def test_the_normalised_form_is_the_whole_sum_over_1_016():
+    """Liang (2001) as in a course sheet of 2010: a white target gives (1.016 - 0.0018) / 1.016."""
+    form = conversion("liang2001_normalised", "tm")
+    assert value((1.0,) * 6, form) == pytest.approx(0.998228, abs=5e-7)
+    for name, plain in (("snow", 0.754840), ("vegetation", 0.173690), ("ice", 0.318830)):
+        assert value(SPECTRA[name], form) == pytest.approx(plain / 1.016, abs=5e-7)
+    misprinted = replace(form, intercept=-0.018 / 1.016)  # the sheet's typed formula
+    assert value(SPECTRA["ice"], form) - value(SPECTRA["ice"], misprinted) > 0.015
+
+
+def test_texts_that_lose_the_last_square_of_knap_leave_the_published_range():
+    """Knap et al. (1999): albedo 0.08 (debris) to 0.86 (dry snow; green 0.96 and nir 0.90 give 0.857 by hand)."""
+    form = conversion("knap1999", "tm")
+    dry = {"green": 0.96, "nir": 0.90}
+    assert form.bands == ("green", "nir")
+    assert value(dry, form) == pytest.approx(0.857, abs=5e-4)
+    unsquared = replace(form, weights=(0.726, -0.015 + 0.581), quadratic=((-0.322, 0.0), (0.0, 0.0)))
+    assert value(dry, unsquared) > 0.86 + 3 * form.fit_error
+    assert value(SPECTRA["ice"], unsquared) - value(SPECTRA["ice"], form) > 0.1
+
+
+def test_green_in_place_of_red_is_another_value():
+    """A known error with Liang (2001): weights 0.356, 0.130, 0.373 laid on blue, green, nir."""
+    form = conversion("liang2001", "tm")
+    for name, spectrum in SPECTRA.items():
+        rho = dict(zip(BANDS, spectrum, strict=True))
+        wrong = value({**rho, "red": rho["green"]}, form)
+        assert wrong - value(spectrum, form) == pytest.approx(0.130 * (rho["green"] - rho["red"]), abs=1e-12), name
+        assert wrong != value(spectrum, form)
+
+
+@pytest.mark.parametrize(("quantity", "rmse", "bias"), [("visible", 0.001, 0.0005), ("near_infrared", 0.0135, 0.010)])
+def test_spectra_with_oli_bands(quantity, rmse, bias):
+    """tests/reference/spectra/README.md; the extra 0.01 for other bands than those of the fit covers the bias."""
+    form, data = conversion("liang2001", "oli", quantity), spectra()
+    error = albedo(np.array([data[OLI[band]] for band in form.bands]), form) - data[f"albedo_{quantity}"]
+    assert np.sqrt(np.mean(error**2)) <= rmse
+    assert abs(error.mean()) <= bias
+    assert np.sqrt(np.mean(error**2)) <= np.hypot(form.fit_error, form.substitution_error)
+
+
+def test_figures_of_a_careful_implementation_on_the_spectra():
+    """Liang (2001) and Tasumi et al. (2008): the errors themselves, to the last digit noted beside the spectra."""
+    data = spectra()
+    for family, sensor, columns, rmse, bias in (
+        ("liang2001", "oli", OLI, 0.0073, -0.0006),
+        ("liang2001", "etm", ETM, 0.0088, -0.0042),
+        ("tasumi2008", "etm", ETM, 0.020, -0.019),
+    ):
+        form = conversion(family, sensor)
+        error = albedo(np.array([data[columns[band]] for band in form.bands]), form) - data["albedo_shortwave"]
+        digit = 5e-4 if family == "tasumi2008" else 5e-5
+        assert np.sqrt(np.mean(error**2)) == pytest.approx(rmse, abs=digit)
+        assert error.mean() == pytest.approx(bias, abs=digit)
+
+
+def test_handbook_ranges_hold_for_the_endmembers():
+    """Oke T. R. (1987). Boundary layer climates, table 1.1: fresh snow 0.80-0.95, desert 0.20-0.45, grass 0.16-0.26,
+    water at small zenith angles 0.03-0.10 (last from memory). Endmembers: common practice, no source."""
+    form = conversion("liang2001", "tm")
+    fresh = (0.98, 0.98, 0.97, 0.93, 0.12, 0.10)
+    sand = (0.18, 0.28, 0.36, 0.45, 0.52, 0.48)
+    water = (0.08, 0.06, 0.04, 0.02, 0.01, 0.01)
+    for spectrum, low, high in (
+        (fresh, 0.80, 0.95),
+        (sand, 0.20, 0.45),
+        (SPECTRA["vegetation"], 0.16, 0.26),
+        (water, 0.03, 0.10),
+    ):
+        assert low <= value(spectrum, form) <= high
+
+
+def test_snow_fraction_at_a_bare_index_is_nothing_though_the_formula_gives_some():
+    """Salomonson & Appel (2004) gives 0.06 and Gascoin et al. (2020) 0.0552 at NDSI 0: both are set to 0 there."""
+    for name, floor in (("salomonson_appel_2004", 0.06), ("gascoin_2020", 0.0552)):
+        assert snow_fraction(0.0, name) == 0
+        assert snow_fraction(1e-9, name) == pytest.approx(floor, abs=5e-5)

@@ -20,7 +20,7 @@ MAGIC = {
     b"\0\0\0\x0cjP  ": "JP2OpenJPEG", b"\xff\x4f\xff\x51": "JP2OpenJPEG", b"EHFA_HEADER_TAG": "HFA",
 }  # fmt: skip
 # blocks are read once and whole, so GDAL's cache only costs memory
-os.environ.setdefault("GDAL_CACHEMAX", "64")
+os.environ.setdefault("GDAL_CACHEMAX", "16")
 os.environ.setdefault("GDAL_DISABLE_READDIR_ON_OPEN", "EMPTY_DIR")
 
 

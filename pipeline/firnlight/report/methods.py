@@ -73,53 +73,59 @@ HEADINGS = {
 }
 
 
-def methods_data(name: str | None = None) -> dict[str, list[Entry]]:
+def methods_data(name: str | None = None) -> dict[str, dict[str, Entry]]:
     """All that `firnlight methods` knows, as plain values for JSON.
 
     Parameters
     ----------
-    name : a section, sensor, conversion or model; None for all of them.
+    name : a section, sensor, instrument, conversion, model or family of conversions; None for all of them.
 
     Returns
     -------
-    section -> entries, the sections always the same; each entry has `name`, `source` and, but for sensors, `formula`
-    (list of lines). An entry of a conversion has the fields of tables/broadband.toml.
+    {"methods": name -> entry}; an entry has `section`, `source`, `formula` (lines; none for a sensor) and the fields
+    of its table. A family gives all its forms, also where a row has the same name.
 
     Raises
     ------
     InputProblem : nothing has that name; the nearest is offered.
     """
-    sections = {"sensors": _sensors(), "conversions": _conversions(), "snow": _snow(), "clear_sky": _sky()}
+    entries = {**_sensors(), **_conversions(), **_snow(), **_sky()}
     if name is None:
-        return sections
+        return {"methods": entries}
     wanted = _plain_word(name)
-    if wanted in sections:
-        return {key: entries if key == wanted else [] for key, entries in sections.items()}
-    # a family comes before the row of the same name, so that all its forms are shown
-    for same in (lambda one: one.get("family", one["name"]), lambda one: one["name"], _instruments):
-        found = {key: [one for one in all_ if _named(same(one), wanted)] for key, all_ in sections.items()}
-        if any(found.values()):
-            return found
-    raise _unknown(name, wanted, sections)
+    words = {key: _words(key, one) for key, one in entries.items()}
+    for level in range(3):  # section or family, then row, then instrument
+        found = {key: entries[key] for key, levels in words.items() if wanted in levels[level]}
+        if found:
+            return {"methods": found}
+    known = list(dict.fromkeys(word for levels in words.values() for level in levels for word in level))
+    near = difflib.get_close_matches(wanted, known, n=1)
+    raise SettingsProblem(
+        "firnlight methods",
+        "name",
+        name,
+        "a sensor, a conversion, a model or one of " + ", ".join(HEADINGS),
+        f"write {near[0]!r}" if near else "`firnlight methods` without a name lists them all",
+    )
 
 
 def methods_text(name: str | None = None) -> str:
-    """The same as text, lines of at most 100 columns; with a name, everything about it.
+    """The same as text, lines of at most WIDTH columns; with a name, everything about it.
 
     Raises
     ------
     InputProblem : nothing has that name; the nearest is offered.
     """
-    writers: dict[str, Callable[[list[Entry], bool], Iterator[str]]] = {
-        "sensors": _sensor_lines,
-        "conversions": _conversion_lines,
-        "snow": _model_lines,
-        "clear_sky": _model_lines,
-    }
+    entries = methods_data(name)["methods"]
     lines: list[str] = []
-    for section, entries in methods_data(name).items():
-        if entries:
-            lines += [*([""] if lines else []), HEADINGS[section], *writers[section](entries, name is not None)]
+    for section, heading in HEADINGS.items():
+        mine = {key: one for key, one in entries.items() if one["section"] == section}
+        if mine:
+            lines += [*([""] if lines else []), heading, "=" * len(heading)]
+        for key, one in mine.items():
+            lines += ["", key]
+            for text in _SAYS[section](one, name is not None):
+                lines += _wrapped(text)
     if name is None:
         lines += ["", "firnlight methods NAME says more about one of them."]
     return "\n".join(lines)
@@ -129,153 +135,128 @@ def _plain_word(name: str) -> str:
     return re.sub(r"[\s-]+", "_", name.strip().lower())
 
 
-def _instruments(entry: Entry) -> list[str]:
-    return entry.get("instruments", [])
+def _words(key: str, one: Entry) -> tuple[list[str], list[str], list[str]]:
+    """What an entry is found by: its section and family, its name, its instruments."""
+    return [one["section"], one.get("family", key)], [key], [_plain_word(word) for word in one.get("instruments", [])]
 
 
-def _named(names: str | list[str], wanted: str) -> bool:
-    return wanted in [_plain_word(one) for one in ([names] if isinstance(names, str) else names)]
-
-
-def _unknown(name: str, wanted: str, sections: Mapping[str, list[Entry]]) -> SettingsProblem:
-    words = [*sections]
-    for entries in sections.values():
-        words += [word for one in entries for word in (one.get("family"), one["name"], *_instruments(one)) if word]
-    near = difflib.get_close_matches(wanted, words, n=1)
-    return SettingsProblem(
-        "firnlight methods",
-        "name",
-        name,
-        "a sensor, a conversion, a model or one of " + ", ".join(sections),
-        f"write {near[0]!r}" if near else "`firnlight methods` without a name lists them all",
-    )
-
-
-def _sensors() -> list[Entry]:
+def _sensors() -> dict[str, Entry]:
     conversions = load_table("broadband").rows.values()
 
     def usable(sensor: str) -> list[str]:
         return list(dict.fromkeys(row["family"] for row in conversions if sensor in row["sensors"]))
 
-    return [{"name": name, **row, "conversions": usable(name)} for name, row in load_table("sensors").rows.items()]
+    rows = load_table("sensors").rows.items()
+    return {key: {**row, "section": "sensors", "formula": [], "conversions": usable(key)} for key, row in rows}
 
 
-def _conversions() -> list[Entry]:
-    entries: list[Entry] = []
+def _conversions() -> dict[str, Entry]:
+    entries: dict[str, Entry] = {}
     titles: dict[str, str] = {}
-    for name, row in load_table("broadband").rows.items():
-        titles.setdefault(row["family"], row.get("title", row["family"]))
-        basis = {"fit_error_basis": "residual standard error of the fit", "reflectance": "surface"}
-        entry = {"name": name, **basis, **row, "title": titles[row["family"]], "formula": [_sum(row)]}
-        entries.append(entry)
+    for key, row in load_table("broadband").rows.items():
+        title = titles.setdefault(row["family"], row.get("title", row["family"]))
+        more = {"section": "conversions", "title": title, "formula": [_sum(row)]}
+        entries[key] = {"reflectance": "surface", **row, **more}
     return entries
 
 
-def _snow() -> list[Entry]:
+def _snow() -> dict[str, Entry]:
+    rule = "set to 0..1, and to 0 where NDSI <= 0"
     rows = load_table("snow").rows
-    rule = {"holds": "set to 0..1, and to 0 where NDSI <= 0"}
-    return [_model(name, {**(rule if row.get("kind") == "fraction" else {}), **row}) for name, row in rows.items()]
+    entries = {key: _model(key, row, "snow") for key, row in rows.items()}
+    return {key: {**one, "holds": rule} if one.get("kind") == "fraction" else one for key, one in entries.items()}
 
 
-def _sky() -> list[Entry]:
-    return [_model(name, row) for name, row in load_table("clearsky").rows.items()]
+def _sky() -> dict[str, Entry]:
+    return {key: _model(key, row, "clear_sky") for key, row in load_table("clearsky").rows.items()}
 
 
-def _model(name: str, row: Mapping[str, Any]) -> Entry:
-    """A row with its title and its formula written out; a row without words for it keeps its numbers."""
-    words = FORMULAS.get(name, FORMULAS.get(str(row.get("formula")), ()))
-    numbers = {key: _printed(value) for key, value in row.items()}
-    formula = [re.sub(r"\+ -(?=[\d.])", "- ", line.format(**numbers)) for line in words]
-    extra = {"symbols": MEANING[name]} if name in MEANING else {}
-    return {"name": name, "title": TITLES.get(name, name), **row, "formula": formula, **extra}
+def _model(key: str, row: Mapping[str, Any], section: str) -> Entry:
+    """A row with its title and its formula written out; without words for it, no lines."""
+    words = FORMULAS.get(key, FORMULAS.get(str(row.get("formula")), ()))
+    numbers = {name: _printed(value) for name, value in row.items()}
+    formula = [line.format(**numbers).replace("+ -", "- ") for line in words]
+    extra = {"symbols": MEANING[key]} if key in MEANING else {}
+    return {**row, "section": section, "title": TITLES.get(key, key), "formula": formula, **extra}
 
 
 def _printed(value: Any) -> Any:
-    """Numbers as written in the table, without exponent; lists of them too."""
+    """Numbers as in the table, never with an exponent; lists of them too."""
     if isinstance(value, list):
         return [_printed(one) for one in value]
-    if isinstance(value, float):
-        return format(Decimal(repr(value)), "f").removesuffix(".0")
-    return value
+    return format(Decimal(repr(value)), "f").removesuffix(".0") if isinstance(value, float) else value
 
 
 def _sum(row: Mapping[str, Any]) -> str:
-    """A conversion as a line of text; weights to three decimals at least, as papers print them."""
+    """A conversion as one line of text."""
     terms = [(weight, band) for band, weight in row["weights"].items()]
     terms += [(weight, f"{band}^2") for band, weight in row.get("squares", {}).items()]
     terms += [(one["weight"], " ".join(one["bands"])) for one in row.get("products", [])]
     if row["intercept"]:
         terms.append((row["intercept"], ""))
-    text = ""
-    for number, words in terms:
-        sign = ("- " if number < 0 else "+ ") if text else ("-" if number < 0 else "")
-        whole, _, decimals = _printed(abs(number)).partition(".")
-        text += f" {sign}{whole}.{decimals:0<3} {words}".rstrip()
-    text = text.strip()
+    text = " ".join(f"{'-' if number < 0 else '+'} {_printed(abs(number))} {band}".rstrip() for number, band in terms)
+    text = text.removeprefix("+ ")
     if "divisor" in row:
         text = f"({text}) / {_printed(row['divisor'])}"
     kind = "" if row["quantity"] == "shortwave" else row["quantity"].replace("_", " ") + " "
     return f"{kind}albedo = {text}"
 
 
-def _wrapped(text: str, indent: int) -> list[str]:
+def _wrapped(text: str) -> list[str]:
     # a sign stays with its number when a formula is broken
     tied = re.sub(r"(?<= [+\-/]) (?=\S)", "\xa0", text)
-    pad, more = " " * indent, " " * (indent + 2)
     lines = textwrap.wrap(
-        tied, WIDTH, initial_indent=pad, subsequent_indent=more, break_long_words=False, break_on_hyphens=False
+        tied, WIDTH, initial_indent="  ", subsequent_indent="    ", break_long_words=False, break_on_hyphens=False
     )
     return [line.replace("\xa0", " ") for line in lines]
 
 
-def _sensor_lines(entries: list[Entry], full: bool) -> Iterator[str]:
-    for one in entries:
-        yield from _wrapped(f"{one['name']}: {one['title']}", 2)
-        if full:
-            for band, about in one["bands"].items():
-                span = f"{about['low_um']:.3f}-{about['high_um']:.3f} um"
-                yield f"    {band:<9} band {about['number']:<3} {span},  noise {about['noise']}"
-            yield from _wrapped(f"noise: {one['noise_basis']}", 4)
-            yield from _wrapped(f"calibration {one['calibration']:.0%} of reflectance: {one['calibration_basis']}", 4)
-            yield from _wrapped(f"sun zenith at most {one['largest_sun_zenith_deg']:g} deg: {one['zenith_basis']}", 4)
-        else:
-            yield from _wrapped("bands: " + ", ".join(one["bands"]), 4)
-        yield from _wrapped("conversions: " + ", ".join(one["conversions"]), 4)
-        yield from _wrapped(f"source: {one['source']}", 4)
+def _sensor_says(one: Entry, full: bool) -> Iterator[str]:
+    yield one["title"]
+    if full:
+        for band, about in one["bands"].items():
+            span = f"{about['low_um']:.3f}-{about['high_um']:.3f} um"
+            yield f"{band}: band {about['number']}, {span}, noise {about['noise']}"
+        yield f"noise: {one['noise_basis']}"
+        yield f"calibration {one['calibration']:.0%} of reflectance: {one['calibration_basis']}"
+        yield f"sun zenith at most {one['largest_sun_zenith_deg']:g} deg: {one['zenith_basis']}"
+    else:
+        yield "bands: " + ", ".join(one["bands"])
+    yield "conversions: " + ", ".join(one["conversions"])
+    yield f"source: {one['source']}"
 
 
-def _conversion_lines(entries: list[Entry], full: bool) -> Iterator[str]:
-    for family in dict.fromkeys(one["family"] for one in entries):
-        kin = [one for one in entries if one["family"] == family]
-        yield from _wrapped(f"{family}: {kin[0]['title']}", 2)
-        for one in kin:
-            yield from _wrapped(one["formula"][0], 4)
-            sensors = [f"{key} (+{extra:g})" if extra else key for key, extra in one["sensors"].items()]
-            yield from _wrapped(
-                f"for {', '.join(sensors)}; {one['reflectance']} reflectance; surfaces: {one['surfaces']}; "
-                f"fit error {one['fit_error']:g}", 6,
-            )  # fmt: skip
-            if full:
-                yield from _wrapped(f"fit error: {one['fit_error_basis']}", 6)
-                yield from _wrapped(f"numbers: {one['status']}", 6)
-                if "note" in one:
-                    yield from _wrapped(f"note: {one['note']}", 6)
-        for source in dict.fromkeys(one["source"] for one in kin):
-            yield from _wrapped(f"source: {source}", 4)
-    if any(extra for one in entries for extra in one["sensors"].values()):
-        yield from _wrapped("(+0.01): uncertainty added because the sensor's bands are not those of the fit", 2)
+def _conversion_says(one: Entry, full: bool) -> Iterator[str]:
+    yield f"{one['title']}; family {one['family']}"
+    yield one["formula"][0]
+    sensors = [f"{key} (+{extra:g})" if extra else key for key, extra in one["sensors"].items()]
+    yield f"for {', '.join(sensors)}; {one['reflectance']} reflectance; surfaces: {one['surfaces']}"
+    yield f"fit error {one['fit_error']:g}: {one['fit_error_basis']}"
+    if full:
+        if any(one["sensors"].values()):
+            yield "(+...): uncertainty to add because the sensor's bands are not those of the fit; judgement, no source"
+        yield f"numbers: {one['status']}"
+        if "note" in one:
+            yield f"note: {one['note']}"
+    yield f"source: {one['source']}"
 
 
-def _model_lines(entries: list[Entry], full: bool) -> Iterator[str]:
-    for one in entries:
-        yield from _wrapped(f"{one['name']}: {one['title']}", 2)
-        for line in one["formula"]:
-            yield from _wrapped(line, 4)
-        for key in ("symbols", "holds", "valid"):
+def _model_says(one: Entry, full: bool) -> Iterator[str]:
+    yield one["title"]
+    yield from one["formula"]
+    for key in ("symbols", "holds", "valid"):
+        if key in one:
+            yield one[key]
+    if full:
+        for key, title in (("status", "numbers"), ("note", "note")):
             if key in one:
-                yield from _wrapped(one[key], 6)
-        if full:
-            for key, title in (("status", "numbers"), ("note", "note")):
-                if key in one:
-                    yield from _wrapped(f"{title}: {one[key]}", 6)
-        yield from _wrapped(f"source: {one['source']}", 4)
+                yield f"{title}: {one[key]}"
+    yield f"source: {one['source']}"
+
+
+_SAYS: dict[str, Callable[[Entry, bool], Iterator[str]]] = {
+    "sensors": _sensor_says,
+    "conversions": _conversion_says,
+    "snow": _model_says,
+    "clear_sky": _model_says,
+}

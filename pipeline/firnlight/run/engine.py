@@ -5,6 +5,8 @@ The only room that knows dask. A tile-day is the unit on a cluster; its blocks r
 
 from __future__ import annotations
 
+import contextlib
+import ctypes
 import os
 import threading
 from collections.abc import Callable, Iterable, Iterator
@@ -17,6 +19,20 @@ from firnlight.core.grid import Window
 from firnlight.core.settings import Engine
 
 _one_tile_day_at_a_time = threading.Lock()  # several would fight for the same cores and memory
+
+
+_MMAP_THRESHOLD = -3  # glibc's M_MMAP_THRESHOLD
+_LARGE_BYTES = 1 << 18
+
+
+def _give_back_memory() -> None:
+    """Let glibc return large blocks to the system at once.
+
+    By default it raises its threshold to the size of our blocks and keeps them in one heap per thread, where they
+    splinter: a 10980 x 10980 tile then grew by 2 GB.
+    """
+    with contextlib.suppress(OSError, AttributeError):
+        ctypes.CDLL(None).mallopt(_MMAP_THRESHOLD, _LARGE_BYTES)
 
 
 def worker_count(workers: int | str) -> int:
@@ -35,6 +51,8 @@ def run_blocks(
     The first error stops what has not begun and is raised after all running tasks have ended.
     """
     import dask
+
+    _give_back_memory()
 
     def after(finish: Callable[[], Any], _blocks: list[None]) -> Any:
         return finish()
