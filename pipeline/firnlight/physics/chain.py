@@ -11,7 +11,7 @@ from firnlight.core.grid import Window
 from firnlight.core.lattice import Lattice
 from firnlight.physics.broadband import Conversion, albedo, uncertainty_parts
 from firnlight.physics.clearsky import day_mean_insolation
-from firnlight.physics.snow import is_snow, ndsi, snow_fraction
+from firnlight.physics.snow import is_snow, ndsi, snow_fraction, snow_limits
 
 Arrays = dict[str, NDArray[Any]]
 
@@ -51,7 +51,8 @@ def albedo_block(
 
     Returns
     -------
-    albedo, snow_fraction (y, x) int16, albedo_u (4, y, x) int16: total, independent, local, shared; quality (y, x)
+    albedo, snow_fraction (y, x) int16, the latter 0 on ground too dark for snow;
+    albedo_u (4, y, x) int16: total, independent, local, shared; quality (y, x)
     uint8. Stored integers in steps of 0.0001; a cell that is missing, cloud, shadow, saturated, under a low sun or
     out of range is `fill` in all but quality.
     """
@@ -77,7 +78,10 @@ def albedo_block(
     safe = np.where(seen, np.clip(value, 0.0, 1.0), 0.0)
     split = [np.where(seen, np.where(snowy, parts[1][k], parts[0][k]), 0.0) for k in range(3)]
     total = np.sqrt(split[0] ** 2 + split[1] ** 2 + split[2] ** 2)
-    share = np.where(seen, snow_fraction(ndsi(green, swir), fraction_name), 0.0)
+    # dark water has the index of snow; the limits of the snow test tell them apart
+    _, nir_limit, green_limit = snow_limits()
+    bright = (nir > nir_limit) & (green > green_limit)
+    share = np.where(seen & bright, snow_fraction(ndsi(green, swir), fraction_name), 0.0)
 
     def stored(field: NDArray[np.float64]) -> NDArray[np.int16]:
         return np.where(seen, _steps(field, 10000.0, 10000), np.int16(fill)).astype(np.int16)

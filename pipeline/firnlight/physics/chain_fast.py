@@ -85,7 +85,7 @@ def albedo_block(
             if not (top + (bottom - top) * fr <= zenith_limit):
                 q |= low_sun
             snow = False
-            ndsi = -1.0
+            ndsi = green = nir = -1.0
             if i_swir >= 0:
                 green, nir, swir = rho[i_green, c], rho[i_nir, c], rho[i_swir, c]
                 if green + swir > 0.0:
@@ -122,7 +122,7 @@ def albedo_block(
                 snow_fraction[r, c] = fill
             else:
                 share = 0.0
-                if ndsi > 0.0:
+                if ndsi > 0.0 and nir > snow_limits[1] and green > snow_limits[2]:
                     if fraction_form == 0:
                         share = fraction_numbers[0] + fraction_numbers[1] * ndsi
                     else:
