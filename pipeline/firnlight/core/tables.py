@@ -50,8 +50,3 @@ def load_table(name: str) -> Sourced:
         raise InputProblem(str(path), "source", source, "a citation", 'add source = "..." at the top of the table')
     rows = {key: {"source": source, **row} for key, row in raw["rows"].items()}
     return Sourced(name, source, rows)
-
-
-def table_text(name: str) -> str:
-    """The bytes of a table as text, for the key of everything computed from it."""
-    return (files("firnlight.tables") / f"{name}.toml").read_text(encoding="utf-8")

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, fields, replace
+from dataclasses import dataclass, fields
 from typing import Any
 
 from firnlight.core.layers import layer
@@ -74,9 +74,6 @@ class Totals:
         else:
             bins = self.bins or other.bins
         return Totals(**sums, bins=bins)
-
-    def without_bins(self) -> Totals:
-        return replace(self, bins=())
 
     @property
     def reflected(self) -> int:

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import errno
+import os
+import shutil
 import threading
 from dataclasses import dataclass
 from pathlib import Path
@@ -20,6 +23,7 @@ from firnlight.io.atomic import move_into_place, scratch_path
 from firnlight.io.fingerprints import content_id
 
 TILE = 512
+LITTLE_ROOM_BYTES = 16 << 20  # a write that failed with less room than this failed for want of it
 
 
 @dataclass(frozen=True)
@@ -28,6 +32,13 @@ class Written:
 
     size: int
     digest: str
+
+
+def _write_failure(path: Path, text: str) -> OSError:
+    """What a failed write of GDAL means: it does not pass the system's reason on, so the disk is asked."""
+    if shutil.disk_usage(path.parent).free < LITTLE_ROOM_BYTES:
+        return OSError(errno.ENOSPC, os.strerror(errno.ENOSPC), str(path))
+    return OSError(f"{path}: the map could not be written: {text}")
 
 
 class CogWriter:
@@ -76,8 +87,14 @@ class CogWriter:
         """Store a block: (rows, cols), or (bands, rows, cols) for a layer of several parts."""
         block = values if values.ndim == 3 else values[np.newaxis]
         where = RasterWindow(window.col, window.row, window.cols, window.rows)
+        failed = None
         with self._lock:
-            self._dataset.write(block, window=where)
+            try:
+                self._dataset.write(block, window=where)
+            except rasterio.errors.RasterioError as error:
+                failed = str(error)
+        if failed is not None:
+            raise _write_failure(self.path, failed)
 
     def finish(self, threads: int = 1) -> Written:
         """Close, build the COG, open it again and check it; the map is not yet in place.
@@ -86,9 +103,10 @@ class CogWriter:
         ------
         OSError : GDAL could not write the file (no room, no permission).
         """
-        with self._lock:
-            self._dataset.close()
+        failed = None
         try:
+            with self._lock:
+                self._dataset.close()
             rasterio.shutil.copy(
                 str(self._raw), str(self._done), driver="COG", compress="ZSTD", level=1, predictor="YES",
                 blocksize=TILE, overviews="IGNORE_EXISTING", overview_resampling=self.layer.overviews.upper(),
@@ -96,9 +114,11 @@ class CogWriter:
             )  # fmt: skip
             self._check()
         except (rasterio.errors.RasterioError, SystemError) as error:
-            raise OSError(f"{self.path}: the map could not be written: {error}") from error
+            failed = str(error)
         finally:
             self._raw.unlink(missing_ok=True)
+        if failed is not None:
+            raise _write_failure(self.path, failed)
         return Written(self._done.stat().st_size, content_id(self._done))
 
     def _check(self) -> None:

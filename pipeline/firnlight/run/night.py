@@ -4,14 +4,17 @@ from __future__ import annotations
 
 import datetime as dt
 import errno
+import math
 import time
 import traceback
 from dataclasses import dataclass, field
 from pathlib import Path
 
 from firnlight.core.errors import InputProblem, NoRoom, SettingsProblem
+from firnlight.core.grid import Grid
 from firnlight.core.settings import Workflow, load_workflow
 from firnlight.io.atomic import sweep
+from firnlight.io.cog import TILE
 from firnlight.io.fingerprints import content_id
 from firnlight.io.items import Asset, read_product_item
 from firnlight.run.engine import engine, worker_count
@@ -137,7 +140,7 @@ def _run(
         return outcome
     _ = planner.ground.regions  # polygons that cannot be used stop the night before anything is written
     sweep(store.root)
-    store.need_room(max(job.grid.rows * job.grid.cols for job in jobs.values()) * BYTES_PER_CELL)
+    store.need_room(max(_cells_on_disk(job.grid) for job in jobs.values()) * BYTES_PER_CELL)
     for tile in sorted({job.tile for job in jobs.values()}):
         try:
             planner.ground.prepare(tile)
@@ -178,6 +181,11 @@ def _run(
         outcome.exit_code,
     )
     return outcome
+
+
+def _cells_on_disk(grid: Grid) -> int:
+    """Cells of a tile's maps with their last blocks filled up."""
+    return math.ceil(grid.rows / TILE) * math.ceil(grid.cols / TILE) * TILE * TILE
 
 
 def _take(

@@ -78,7 +78,7 @@ class Store:
         free = shutil.disk_usage(self.root).free
         if free < needed_bytes:
             raise NoRoom(
-                str(self.root), "free disk space", f"{free / 2**30:.2f} GiB", f"at least {needed_bytes / 2**30:.2f} GiB",
+                str(self.root), "free disk space", f"{free / 2**20:.1f} MiB", f"at least {needed_bytes / 2**20:.1f} MiB",
                 "make room, or set store.path to a larger disk",
             )  # fmt: skip
 
