@@ -3,9 +3,11 @@
 Run workflows/first-night before it.
 """
 
+import io
 from pathlib import Path
 
 import rasterio
+from PIL import Image
 
 from firnlight.report.figures import MapPanel, map_picture
 
@@ -24,7 +26,8 @@ def main() -> None:
     note = (
         "Invented area (Morrowfell snowfields). Hatched: not seen (cloud, shadow, outside the scene). Clear-sky insolation."
     )
-    (ROOT / "sample_tiles/first_night.png").write_bytes(map_picture(panels, 30.0, note))
+    picture = Image.open(io.BytesIO(map_picture(panels, 30.0, note))).convert("RGB")
+    picture.quantize(128).save(ROOT / "sample_tiles/first_night.png", optimize=True)  # the sample is to stay small
 
 
 if __name__ == "__main__":

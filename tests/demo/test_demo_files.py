@@ -128,4 +128,4 @@ def test_the_sample_is_what_the_model_makes(tmp_path):
         for name, asset in json.loads(path.read_text(encoding="utf-8")).get("assets", {}).items():
             digest = hashlib.sha256((path.parent / asset["href"]).read_bytes()).hexdigest()
             assert asset["file:checksum"] == "1220" + digest, f"{path.name} {name}"
-    assert sum(path.stat().st_size for path in SAMPLE.rglob("*") if path.is_file()) < 6e6
+    assert sum(path.stat().st_size for path in SAMPLE.rglob("*") if path.is_file()) < 4.5e6

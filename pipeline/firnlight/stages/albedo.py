@@ -16,7 +16,7 @@ from firnlight.physics.broadband import Conversion, conversion
 from firnlight.physics.snow import fraction_numbers, snow_limits
 from firnlight.stages.stage import Stage
 
-ALBEDO = Stage("albedo", 1, ("reflectance", "sun"), ("albedo", "quality"), ("conversion", "snow_test", "limits"))
+ALBEDO = Stage("albedo", 2, ("reflectance", "sun"), ("albedo", "quality"), ("conversion", "snow_test", "limits"))
 ALBEDO_U = Stage("albedo uncertainty", 1, ("reflectance", "albedo"), ("albedo_u",), ("conversion", "errors"))
 SNOW = Stage("snow fraction", 1, ("reflectance", "albedo"), ("snow_fraction",), ("snow_test", "snow_fraction"))
 

@@ -16,7 +16,7 @@ from firnlight.physics.clearsky import Atmosphere
 from firnlight.physics.clearsky_fast import day_moments
 from firnlight.stages.stage import Stage
 
-INSOLATION = Stage("insolation", 1, ("albedo", "elevation", "ground"), ("insolation",), ("insolation",))
+INSOLATION = Stage("insolation", 2, ("albedo", "elevation", "ground"), ("insolation",), ("insolation",))
 
 # heights of the levels between which the kernel interpolates; the curvature of insolation with height over one
 # step stays under 0.01 W m-2 (tests/stages/test_insolation.py)
