@@ -117,3 +117,71 @@ def test_demo_refuses_a_folder_with_something_in_it(tmp_path, capsys):
     (tmp_path / "mine.txt").write_text("x", encoding="utf-8")
     assert main(["demo", str(tmp_path)]) == 2
     assert "not empty" in capsys.readouterr().err
+
+
+def test_a_failed_tile_day_stays_in_the_status_until_it_is_made(area, monkeypatch):
+    from firnlight.run import night as nights
+
+    def fail(job):
+        def run(threads):
+            raise RuntimeError("the engine coughed")
+
+        return run
+
+    with monkeypatch.context() as patch:
+        patch.setattr(nights, "job_call", fail)
+        assert area.run("night")[0] == 3
+    _, out, _ = area.run("status", "--failed")
+    assert out.startswith("Refused or failed: 4.")
+    assert "the engine coughed" in out
+    assert area.night() == 0
+    assert area.run("status", "--failed")[1] == "Refused or failed: 0.\n"
+
+
+def test_ground_that_is_missing_or_damaged_for_one_tile_stops_no_command(area):
+    path = area.folder / "static/FELL-B/land_cover.tif"
+    data = path.read_bytes()
+    for spoil in (lambda: path.unlink(), lambda: path.write_bytes(data[: len(data) // 2])):
+        spoil()
+        code, _, err = area.run("check")
+        assert code == 3
+        assert "land_cover" in err
+        assert area.run("night", "--dry-run")[0] == 0
+        code, out, _ = area.run("night", "--quiet")
+        assert code == 3
+        assert "Traceback" not in out
+        code, out, _ = area.run("status", "--failed")
+        assert code == 0
+        assert "land_cover" in out
+    path.write_bytes(data)
+    assert area.night() == 0
+
+
+def test_a_dry_run_without_ledger_says_what_a_night_would_find(done_area):
+    (done_area.store / "ledger.db").unlink()
+    _, out, _ = done_area.run("night", "--dry-run")
+    assert out.count("done (nothing has changed)") == 4
+    assert not (done_area.store / "ledger.db").exists()
+
+
+def test_totals_whose_scene_is_gone_are_named(done_area):
+    import shutil
+
+    shutil.rmtree(done_area.items()[0].parent)
+    assert done_area.night() == 0
+    assert "no scene of theirs can be used now: 1 tile-days" in done_area.run("status")[1]
+
+
+@pytest.mark.parametrize(
+    "arguments",
+    [["budget", "--year", "99999"], ["night", "--on", "0001-01-05", "--dry-run"], ["budget", "--out", "nowhere/x.csv"]],
+)
+def test_absurd_dates_and_folders_are_no_tracebacks(done_area, arguments):
+    code, _, err = done_area.run(*arguments)
+    assert code in (0, 2)
+    assert "Traceback" not in err
+
+
+def test_the_list_of_commands_tells_what_each_does(capsys):
+    main(["--help"])
+    assert "night     Turn every due scene into maps" in capsys.readouterr().out

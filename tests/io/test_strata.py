@@ -162,7 +162,7 @@ def test_the_table_comes_back_and_no_scratch_is_left(tmp_path, layers):
     assert strata.read_strata_table(tmp_path / "a/strata.tif") == table
     assert sorted(os.listdir(tmp_path / "a")) == ["strata.json", "strata.tif"]
     (tmp_path / "a/strata.json").write_text('{"strata": [', encoding="utf-8")
-    with pytest.raises(InputProblem, match="delete both"):
+    with pytest.raises(InputProblem, match="it makes them again"):
         strata.read_strata_table(tmp_path / "a/strata.tif")
 
 

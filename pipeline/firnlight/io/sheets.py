@@ -115,7 +115,13 @@ def prepare_totals(
 ) -> Sheet:
     """Write the totals of a tile-day beside their final place; nothing is seen before `publish`."""
     rows = region_rows(table, totals)
-    metadata = {"firnlight:key": key, "tile": tile, "day": day.isoformat(), "scenes": json.dumps(scenes)}
+    metadata = {
+        "firnlight:key": key,
+        "firnlight:strata": table.key,
+        "tile": tile,
+        "day": day.isoformat(),
+        "scenes": json.dumps(scenes),
+    }
     columns: dict[str, list[object]] = {name: [getattr(row, name) for row in rows] for name in _KEYS}
     for name in _sum_names():
         values = [getattr(row.totals, name) for row in rows]
@@ -131,6 +137,7 @@ class DayTotals:
     tile: str
     day: dt.date
     key: str
+    strata: str  # key of the strata that they are summed over
     scenes: tuple[str, ...]
     rows: tuple[Row, ...]
 
@@ -152,7 +159,7 @@ def read_totals(path: Path) -> DayTotals:
             keys = {name: data[name][n] for name in _KEYS}
             rows.append(Row(**keys, totals=Totals(**sums, bins=tuple(data["bins"][n] or ()))))
         return DayTotals(
-            meta["tile"], dt.date.fromisoformat(meta["day"]), meta["firnlight:key"],
+            meta["tile"], dt.date.fromisoformat(meta["day"]), meta["firnlight:key"], meta["firnlight:strata"],
             tuple(json.loads(meta["scenes"])), tuple(rows),
         )  # fmt: skip
     except (pa.ArrowException, OSError, KeyError, ValueError) as error:

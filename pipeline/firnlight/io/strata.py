@@ -83,7 +83,7 @@ def read_strata_table(raster: Path) -> StrataTable:
             "strata",
             str(error),
             "the table of a strata raster",
-            "delete both: the next night makes them",
+            "run `firnlight night`: it makes them again",
         ) from error
 
 

@@ -14,7 +14,7 @@ from firnlight.core.totals import CM2_PER_KM2, Totals
 from firnlight.io.fingerprints import text_id
 from firnlight.io.regions import ALL
 from firnlight.io.sheets import DayTotals, read_totals
-from firnlight.run.ground import StaticRow, static_rows
+from firnlight.run.ground import StaticRow, other_strata, static_rows
 from firnlight.run.store import Store
 
 KEYS = ("region", "elevation_band", "land_cover", "snow")
@@ -89,6 +89,8 @@ def regional_budget(
     SettingsProblem : the store has no totals, or none in the span.
     """
     days = [read_totals(path) for path in store.budget_files()]
+    if workflow.area.tiles is not None:
+        days = [one for one in days if one.tile in workflow.area.tiles]
     inside = [one for one in days if (since is None or one.day >= since) and (until is None or one.day <= until)]
     if not inside:
         held = f"{min(d.day for d in days)} to {max(d.day for d in days)}" if days else "nothing"
@@ -98,13 +100,22 @@ def regional_budget(
         )  # fmt: skip
     since = since or min(one.day for one in inside)
     until = until or max(one.day for one in inside)
-    ground = static_rows(store)
+    ground = static_rows(store, {**dict.fromkeys(one.tile for one in days), **_strata_keys(store, inside)})
     rows: list[dict[str, object]] = []
     starts = workflow.area.hydrological_year_starts
     for first, last in periods(since, until, every, starts):
         part = [one for one in inside if first <= one.day <= last]
         rows += _period_rows(workflow, first, last, part, ground, by, as_of)
     return Answer(rows, since, until, as_of, workflow.area.name)
+
+
+def _strata_keys(store: Store, days: Iterable[DayTotals]) -> dict[str, str]:
+    """Tile -> key of the strata below its totals; days of one tile must agree."""
+    keys: dict[str, str] = {}
+    for one in days:
+        if keys.setdefault(one.tile, one.strata) != one.strata:
+            raise other_strata(store, one.tile)
+    return keys
 
 
 def _grouping(by: tuple[str, ...]) -> Callable[[str, str, float | None, float | None], _Group]:

@@ -53,11 +53,7 @@ def _check(planner: Planner, tell: Listener) -> Checked:
     _ = planner.ground.regions
     for number, (tile, day) in enumerate(due, 1):
         before = len(planner.refusals)
-        try:
-            decision = planner.decide(tile, day)
-        except InputProblem as problem:
-            problems.append(str(problem))
-            continue
+        decision = planner.decide(tile, day)
         for scene, numbers in zip(decision.job.scenes, decision.job.numbers, strict=True) if decision.job else ():
             count += 1
             try:
@@ -73,14 +69,14 @@ def _check(planner: Planner, tell: Listener) -> Checked:
                 problems.append(str(problem))
         bad = len(planner.refusals) > before
         tell(Step(f"{tile} {day}", number, len(due), "refused" if bad else "read", time.monotonic() - begun))
-    for tile in planner.ground.grids:
-        elevation = planner.ground.of(tile).elevation
-        if elevation:
+    for tile, grid in planner.ground.grids.items():
+        for path in planner.ground.files(tile):
             try:
-                dataset = open_raster(elevation)
-                for window in planner.ground.grids[tile].windows(BLOCK_ROWS, BLOCK_COLS):
-                    read_window(dataset, window)
+                with open_raster(path) as dataset:
+                    for window in grid.windows(BLOCK_ROWS, BLOCK_COLS):
+                        read_window(dataset, window)
             except InputProblem as problem:
                 problems.append(str(problem))
     problems += [refusal.reason for refusal in planner.refusals]
+    problems = list(dict.fromkeys(problems))
     return Checked(len(planner.ground.grids), count, problems)

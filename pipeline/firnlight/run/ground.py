@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Mapping
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
+from typing import Any
 
-from firnlight.core.errors import InputProblem
+from firnlight.core.errors import InputProblem, SettingsProblem
 from firnlight.core.grid import Grid
 from firnlight.core.settings import Workflow
 from firnlight.io import ground as places
@@ -83,15 +85,33 @@ class Ground:
             )  # fmt: skip
         return self._tiles[tile]
 
+    def files(self, tile: str) -> list[str]:
+        """Elevation and land cover of a tile that are there."""
+        written = (self.workflow.surface.elevation, self.workflow.surface.land_cover)
+        paths = [self.workflow.tile_path(one, tile) for one in written if one is not None]
+        return [str(path) for path in paths if path.is_file()]
+
     @cached_property
     def _regions_facts(self) -> list[object]:
         settings = self.workflow.regions
         bands = settings.elevation_bands
-        ident = self.contents.of(self.workflow.path(settings.file)) if settings.file else self.workflow.area.name
+        ident = self.contents.of(self._regions_path(settings.file)) if settings.file else self.workflow.area.name
         return [
             ident, settings.layer, settings.id_field, settings.name_field, settings.parent_field,
             [bands.from_m, bands.to_m, bands.step_m] if bands else None,
         ]  # fmt: skip
+
+    def _regions_path(self, written: str) -> Path:
+        path = self.workflow.path(written)
+        if not path.is_file():
+            raise SettingsProblem(
+                str(self.workflow.file),
+                "regions.file",
+                f"no file {path}",
+                "a vector file with polygons",
+                "correct regions.file",
+            )
+        return path
 
     @cached_property
     def regions(self) -> Regions:
@@ -99,7 +119,7 @@ class Ground:
         if settings.file is None:
             return whole_area(self.workflow.area.name)
         return read_regions(
-            self.workflow.path(settings.file),
+            self._regions_path(settings.file),
             settings.layer,
             settings.id_field,
             settings.name_field,
@@ -127,8 +147,11 @@ class Ground:
         """Write down each region's ground outside every tile, unless the same is written already."""
         path = outside_file(self.store)
         facts = text_id(json.dumps([self._regions_facts, [[name, _place(grid)] for name, grid in self.grids.items()]]))
-        if path.is_file() and json.loads(path.read_text(encoding="utf-8")).get("key") == facts:
-            return
+        try:
+            if _outside(self.store)["key"] == facts:
+                return
+        except InputProblem:
+            pass  # gone or damaged: written again
         body = {
             "key": facts, "cm2": outside_area_cm2(self.regions, self.grids),
             "names": self.regions.names, "parents": self.regions.parents,
@@ -137,12 +160,31 @@ class Ground:
         write_text(path, json.dumps(body, indent=1, ensure_ascii=False) + "\n")
 
 
+def other_strata(store: Store, tile: str) -> InputProblem:
+    """Totals and ground of a tile that do not belong together must never be shown as one table."""
+    return InputProblem(
+        str(store.strata(tile)), f"ground of tile {tile}", "other regions, bands or covers than its totals were summed over",
+        "totals and ground of one setting", "run `firnlight night` without dates or --tile: it brings all days up to date",
+    )  # fmt: skip
+
+
 def _place(grid: Grid) -> list[object]:
     return [grid.crs, list(grid.transform), list(grid.shape)]
 
 
 def outside_file(store: Store) -> Path:
     return store.root / "terrain" / "regions.json"
+
+
+def _outside(store: Store) -> dict[str, Any]:
+    path = outside_file(store)
+    try:
+        body = json.loads(path.read_text(encoding="utf-8"))
+        return {name: body[name] for name in ("key", "cm2", "names", "parents")}
+    except (OSError, ValueError, KeyError, TypeError) as error:
+        raise InputProblem(
+            str(path), "regions", str(error), "the regions of this store", "run `firnlight night`: it writes them again"
+        ) from error
 
 
 @dataclass(frozen=True)
@@ -157,13 +199,23 @@ class StaticRow:
     area_cm2: int
 
 
-def static_rows(store: Store) -> list[StaticRow]:
-    """All ground of the store's tiles by region, cover and band, with what lies outside every tile."""
+def static_rows(store: Store, strata_keys: Mapping[str, str | None]) -> list[StaticRow]:
+    """All ground of some tiles by region, cover and band, with what lies outside every tile.
+
+    Parameters
+    ----------
+    strata_keys : tile -> key of the strata that its totals were summed over; None: no totals are shown.
+
+    Raises
+    ------
+    InputProblem : the strata of a tile are gone, or others than its totals were summed over.
+    """
     rows = []
-    path = outside_file(store)
-    outside = json.loads(path.read_text(encoding="utf-8")) if path.is_file() else {"cm2": {}, "names": {}}
-    for raster in sorted((store.root / "terrain").glob("*/strata.tif")):
-        table = read_strata_table(raster)
+    outside = _outside(store)
+    for tile, key in sorted(strata_keys.items()):
+        table = read_strata_table(store.strata(tile))
+        if key not in (None, table.key) or not store.strata(tile).is_file():
+            raise other_strata(store, tile)
         for stratum in table.strata:
             for region in stratum_regions(stratum):
                 name = table.region_names.get(region, "")

@@ -9,7 +9,7 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 
-from firnlight.core.errors import SettingsProblem
+from firnlight.core.errors import InputProblem, NoRoom, SettingsProblem
 
 SCHEMA = 1
 
@@ -80,10 +80,7 @@ class Ledger:
                     "use the firnlight that wrote it, or delete the file: the next night rebuilds it from the maps",
                 )  # fmt: skip
         except sqlite3.DatabaseError as error:
-            raise SettingsProblem(
-                str(path), "ledger", str(error), "a readable ledger",
-                "delete the file: the next night rebuilds it from the maps",
-            ) from error  # fmt: skip
+            raise self._trouble(error) from error
 
     def close(self) -> None:
         self._db.close()
@@ -94,9 +91,24 @@ class Ledger:
         try:
             yield self._db
             self._db.execute("commit")
-        except BaseException:
-            self._db.execute("rollback")
+        except BaseException as error:
+            if self._db.in_transaction:
+                self._db.execute("rollback")
+            if isinstance(error, sqlite3.OperationalError):
+                raise self._trouble(error) from error
             raise
+
+    def _trouble(self, error: sqlite3.Error) -> InputProblem:
+        """What an error of SQLite asks of the user: room on the disk, or a new ledger."""
+        if "full" in str(error) or "I/O" in str(error):
+            return NoRoom(
+                str(self.path), "free disk space", str(error), "room for the ledger",
+                "make room (or mend the disk), then run the same command: it goes on where it stopped",
+            )  # fmt: skip
+        return SettingsProblem(
+            str(self.path), "ledger", str(error), "a readable ledger",
+            "delete the file: the next night rebuilds it from the maps",
+        )  # fmt: skip
 
     def products(self) -> dict[tuple[str, dt.date, str], Product]:
         rows = self._db.execute("select tile, day, name, path, key, size, mtime_ns, digest from product")
@@ -164,6 +176,11 @@ class Ledger:
                 since = old[subject].since if same else now
                 day = one.day.isoformat() if one.day else None
                 db.execute("insert into refusal values (?, ?, ?, ?, ?)", (subject, day, one.tile, one.reason, since))
+
+    def was_cut_short(self) -> bool:
+        """True where the last run did not come to its end."""
+        row = self._db.execute("select finished from run order by id desc limit 1").fetchone()
+        return row is not None and row[0] is None
 
     def start_run(self, command: str, now: str) -> int:
         with self._transaction() as db:

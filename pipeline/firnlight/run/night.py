@@ -7,6 +7,7 @@ import errno
 import math
 import time
 import traceback
+from collections.abc import Iterable
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -24,6 +25,7 @@ from firnlight.run.progress import Listener, Step, silent
 from firnlight.run.store import ITEM, Store
 from firnlight.run.tile import Made, TileJob, job_call
 
+FINISHED_BYTES_PER_CELL = 8  # 4.8 measured on a demo tile
 BYTES_PER_CELL = 2 * 22  # scratch and finished maps, uncompressed: what a tile-day may need at worst
 CELLS_PER_MINUTE = 5e8  # order of size on two cores, for the estimate only
 
@@ -37,6 +39,7 @@ class Outcome:
     already: list[str] = field(default_factory=list)
     refusals: list[Refusal] = field(default_factory=list)
     failed: dict[str, str] = field(default_factory=dict)
+    warnings: list[str] = field(default_factory=list)
     seconds: float = 0.0
 
     @property
@@ -58,7 +61,7 @@ class Outcome:
         return {
             "version": 1, "store": str(self.store), "made": self.made, "already": self.already,
             "refused": [{"input": one.subject, "reason": one.reason} for one in self.refusals],
-            "failed": self.failed, "seconds": round(self.seconds, 3), "exit_code": self.exit_code,
+            "failed": self.failed, "warnings": self.warnings, "seconds": round(self.seconds, 3), "exit_code": self.exit_code,
         }  # fmt: skip
 
 
@@ -71,8 +74,11 @@ def plan_night(workflow: Workflow, span: Span, look_only: bool = False) -> tuple
     store = Store(workflow.path(workflow.store.path))
     ledger = Ledger(store.ledger, read_only=True)
     try:
+        if not store.ledger.exists():
+            rebuild_ledger(store, ledger)  # in memory: what a night would find again
         planner = Planner(workflow, store, ledger, worker_count(workflow.engine.workers))
         due = planner.due(span)
+        _ = planner.ground.regions if look_only else None
         decisions = [] if look_only else [planner.decide(tile, day) for tile, day in due]
         return decisions, planner.refusals
     finally:
@@ -126,29 +132,21 @@ def _run(
     due = planner.due(span)
     jobs: dict[str, TileJob] = {}
     for tile, day in due:
-        try:
-            _take(planner.decide(tile, day), jobs, outcome, ledger, block)
-        except SettingsProblem:
-            raise
-        except InputProblem as problem:  # the tile's ground; other tiles go on
-            planner.refusals.append(Refusal(f"{tile} {day}", str(problem), day, tile))
+        _take(planner.decide(tile, day), jobs, outcome, ledger, block)
     planner.contents.keep()
     ledger.record_refusals(planner.refusals, started, due)
+    if jobs or ledger.was_cut_short():
+        sweep(store.root)
+    if jobs:
+        _ = planner.ground.regions  # polygons that cannot be used stop the night before anything is written
+        store.need_room(_room_needed(jobs.values()))
+    _prepare_ground(planner, jobs)
+    outcome.warnings = planner.ground.warnings
     if not jobs:
+        ledger.record_refusals(planner.refusals, started, due)
         outcome.refusals = planner.refusals
         outcome.seconds = time.monotonic() - begun
         return outcome
-    _ = planner.ground.regions  # polygons that cannot be used stop the night before anything is written
-    sweep(store.root)
-    store.need_room(max(_cells_on_disk(job.grid) for job in jobs.values()) * BYTES_PER_CELL)
-    for tile in sorted({job.tile for job in jobs.values()}):
-        try:
-            planner.ground.prepare(tile)
-        except InputProblem as problem:
-            for name in [name for name, job in jobs.items() if job.tile == tile]:
-                job = jobs.pop(name)
-                planner.refusals.append(Refusal(name, str(problem), job.day, tile))
-    planner.ground.note_outside()
     run = ledger.start_run("night", started)
     total, done = len(jobs), 0
     with engine(settings.engine, cluster) as where:
@@ -168,7 +166,8 @@ def _run(
                 tell(Step(name, done, total, last, seconds, detail[-1] if detail else ""))
             jobs = again
     planner.contents.keep()
-    ledger.record_refusals(planner.refusals, started, due)
+    failures = [_failure(name, trace) for name, trace in outcome.failed.items()]
+    ledger.record_refusals([*planner.refusals, *failures], started, due)
     outcome.refusals = planner.refusals
     outcome.seconds = time.monotonic() - begun
     ledger.end_run(
@@ -186,6 +185,33 @@ def _run(
 def _cells_on_disk(grid: Grid) -> int:
     """Cells of a tile's maps with their last blocks filled up."""
     return math.ceil(grid.rows / TILE) * math.ceil(grid.cols / TILE) * TILE * TILE
+
+
+def _room_needed(jobs: Iterable[TileJob]) -> int:
+    """Scratch and maps of the largest tile-day, and the finished maps of the others."""
+    cells = sorted(_cells_on_disk(job.grid) for job in jobs)
+    return cells[-1] * BYTES_PER_CELL + sum(cells[:-1]) * FINISHED_BYTES_PER_CELL
+
+
+def _prepare_ground(planner: Planner, jobs: dict[str, TileJob]) -> None:
+    """Bring the static ground of every tile that has or will have totals up to date; a bad tile loses its jobs."""
+    tiles = {job.tile for job in jobs.values()} | {tile for tile, _, _ in planner.products}
+    for tile in sorted(tiles & set(planner.ground.grids)):
+        try:
+            planner.ground.prepare(tile)
+        except SettingsProblem:
+            raise
+        except InputProblem as problem:
+            for name in [name for name, job in jobs.items() if job.tile == tile]:
+                planner.refusals.append(Refusal(name, str(problem), jobs.pop(name).day, tile))
+    if tiles:
+        planner.ground.note_outside()
+
+
+def _failure(name: str, trace: str) -> Refusal:
+    """A failed tile-day as `status` shows it, until it is made."""
+    tile, day = name.rsplit(" ", 1)
+    return Refusal(name, f"{name} failed: {trace.strip().splitlines()[-1]}", dt.date.fromisoformat(day), tile)
 
 
 def _take(
@@ -224,6 +250,11 @@ def _record(name: str, job: TileJob, result: object, planner: Planner, ledger: L
     if isinstance(result, InputProblem):
         planner.refusals.append(Refusal(name, str(result), job.day, job.tile))
         return None
+    if isinstance(result, MemoryError):
+        raise NoRoom(
+            name, "memory", str(result) or "none left", "room for a block of the tile",
+            "close other programs or set engine.workers lower, then run the same command",
+        ) from result  # fmt: skip
     assert isinstance(result, Exception)
     outcome.failed[name] = "".join(traceback.format_exception(result))
     return None

@@ -134,7 +134,21 @@ class Planner:
         self.scenes[scene.tile, day] = [one for one in self.scenes[scene.tile, day] if one is not scene]
 
     def decide(self, tile: str, day: dt.date) -> Decision:
-        """What is to be done for one tile-day."""
+        """What is to be done for one tile-day; where the tile's ground cannot be used, that is a refusal.
+
+        Raises
+        ------
+        SettingsProblem : the workflow cannot be used at all.
+        """
+        try:
+            return self._decide(tile, day)
+        except SettingsProblem:
+            raise
+        except InputProblem as problem:
+            self.refusals.append(Refusal(f"{tile} {day}", str(problem), day, tile))
+            return Decision(tile, day, "nothing left", "the ground of the tile cannot be used")
+
+    def _decide(self, tile: str, day: dt.date) -> Decision:
         self._take_contents(tile, day)
         contents = self._usable(tile, day)
         decision = self._compare(tile, day, contents)

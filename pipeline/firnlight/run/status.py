@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import datetime as dt
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -9,7 +10,7 @@ from firnlight.core.settings import Workflow
 from firnlight.run.ledger import Ledger, Refusal
 from firnlight.run.night import plan_night
 from firnlight.run.plan import Decision, Span
-from firnlight.run.store import Store
+from firnlight.run.store import BUDGET, Store
 
 
 @dataclass(frozen=True)
@@ -20,6 +21,7 @@ class StoreStatus:
     runs: list[tuple[object, ...]]
     decisions: list[Decision]
     refusals: list[Refusal]
+    orphans: list[tuple[str, dt.date]]  # tile-days with totals and no scene that can be used now
 
     @property
     def waiting(self) -> list[Decision]:
@@ -37,6 +39,7 @@ class StoreStatus:
             "version": 1,
             "runs": [dict(zip(names, run, strict=True)) for run in self.runs],
             "done": [f"{one.tile} {one.day}" for one in self.decisions if one.what == "done"],
+            "kept_without_scene": [f"{tile} {day}" for tile, day in self.orphans],
             "waiting": [{"tile": one.tile, "day": one.day.isoformat(), "reason": one.reason} for one in self.waiting],
             "refused": [
                 {"input": one.subject, "reason": one.reason, "since": one.since, "retry": self.retry(one)}
@@ -57,11 +60,16 @@ class StoreStatus:
                 )
             else:
                 lines.append("No run yet.")
+            if self.orphans:
+                lines.append(
+                    f"Kept, though no scene of theirs can be used now: {len(self.orphans)} tile-days, still counted."
+                )
+                lines += [f"  {day} {tile}" for tile, day in self.orphans]
         if not only_failed:
             lines.append(f"Waits: {len(self.waiting)} tile-days.")
             lines += [f"  {one.day} {one.tile}: {one.reason}" for one in self.waiting]
         if not only_waiting:
-            lines.append(f"Refused: {len(self.refusals)} inputs.")
+            lines.append(f"Refused or failed: {len(self.refusals)}.")
             for one in self.refusals:
                 lines += [f"  {one.reason}", f"  Then: {self.retry(one)}"]
         return "\n".join(lines)
@@ -77,6 +85,9 @@ def store_status(workflow: Workflow, path: Path) -> StoreStatus:
         # what a night found only while reading stays refused until that tile-day is made
         left = {(one.tile, one.day) for one in decisions if one.what != "done"}
         late = {s: r for s, r in known.items() if s not in now and (r.tile, r.day) in left}
-        return StoreStatus(path, ledger.runs(), decisions, [*now.values(), *late.values()])
+        held = {(tile, day) for tile, day, name in ledger.products() if name == BUDGET}
+        usable = {(one.tile, one.day) for one in decisions if one.what in ("done", "make")}
+        orphans = sorted(held - usable, key=lambda entry: (entry[1], entry[0]))
+        return StoreStatus(path, ledger.runs(), decisions, [*now.values(), *late.values()], orphans)
     finally:
         ledger.close()
