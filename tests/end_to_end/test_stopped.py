@@ -77,6 +77,29 @@ def test_a_stopped_run_goes_on_to_the_same_bytes(area, done_bytes, number, after
     assert area.files() == done_bytes
 
 
+SIGNAL_IN_A_CALLBACK = """
+import ctypes, signal, sys, time
+from firnlight.cli.stopping import stoppable
+
+@ctypes.CFUNCTYPE(None)
+def called_from_c():
+    signal.raise_signal(signal.Signals(int(sys.argv[1])))
+
+with stoppable():
+    called_from_c()
+    time.sleep(20)
+    print("went on")
+"""
+
+
+@pytest.mark.parametrize("number", [signal.SIGTERM, signal.SIGINT], ids=lambda number: number.name)
+def test_a_signal_inside_a_callback_from_c_is_not_lost(number):
+    done = subprocess.run([sys.executable, "-c", SIGNAL_IN_A_CALLBACK, str(int(number))], capture_output=True, timeout=60)
+    assert b"went on" not in done.stdout
+    assert b"Exception ignored" not in done.stderr
+    assert done.returncode in (143, -signal.SIGINT)
+
+
 @pytest.fixture
 def done_bytes(made_area, tmp_path, capsys):
     """What an unbroken run of the same area gives."""

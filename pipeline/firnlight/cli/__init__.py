@@ -3,27 +3,23 @@
 from __future__ import annotations
 
 import errno
-import signal
 import sys
 
 import click
 
 from firnlight.cli import answers, nights, setting_up
 from firnlight.cli.group import commands
+from firnlight.cli.stopping import stoppable
 from firnlight.core.errors import InputProblem, NoRoom, StoreBusy
 
 __all__ = ["answers", "commands", "main", "nights", "setting_up"]
 
 
-def _stop(number: int, frame: object) -> None:
-    raise SystemExit(128 + number)
-
-
 def main(arguments: list[str] | None = None) -> int:
     """Run one command and return its exit code."""
-    signal.signal(signal.SIGTERM, _stop)
     try:
-        code = commands.main(args=arguments, prog_name="firnlight", standalone_mode=False)
+        with stoppable():
+            code = commands.main(args=arguments, prog_name="firnlight", standalone_mode=False)
         return code if isinstance(code, int) else 0
     except NoRoom as problem:
         return _say(problem, 6)
