@@ -2,7 +2,8 @@
 
 Run: .venv/bin/python tests/bench/run_bench.py [--size 10980] [--rounds 3]
 Prints, from one run and in turn: (a) the floor: decode all inputs, encode all outputs, same codec and threads;
-(b) `firnlight night` as a whole process with kernels compiled; peak memory of b; the ratio of the medians.
+(b) `firnlight night` as a whole process with kernels compiled; peak memory of b; the ratio of the medians;
+(c) a flat night and (d) one with terrain, both after the first: what is worked out once per tile is kept.
 """
 
 from __future__ import annotations
@@ -12,6 +13,7 @@ import contextlib
 import json
 import os
 import platform
+import re
 import shutil
 import statistics
 import subprocess
@@ -26,21 +28,24 @@ import rasterio
 from rasterio.windows import Window
 
 from firnlight.core.grid import Grid
-from firnlight.core.layers import layer, layer_names
+from firnlight.core.layers import day_layers, layer
 from firnlight.io.cog import CogWriter
 from firnlight.io.rasters import grid_of
 
 BLOCK = (512, 2048)
 
 
-def night(folder: Path) -> tuple[float, float]:
-    """Seconds and peak resident MiB of a night on an empty store.
+def night(folder: Path, workflow: str = "workflow.toml", after_the_first: bool = False) -> tuple[float, float]:
+    """Seconds and peak resident MiB of a night on an empty store, or on one that holds the static ground alone.
 
     The high-water mark is read from the process itself: what wait4 tells also holds the memory of this one.
     """
-    shutil.rmtree(folder / "store", ignore_errors=True)
+    store = folder / ("store" if workflow == "workflow.toml" else f"store_{Path(workflow).stem}")
+    for part in (store / "maps", store / "budget") if after_the_first else (store,):
+        shutil.rmtree(part, ignore_errors=True)
+    (store / "ledger.db").unlink(missing_ok=True)
     begun = time.perf_counter()
-    command = [sys.executable, "-m", "firnlight", "night", str(folder / "workflow.toml"), "--quiet"]
+    command = [sys.executable, "-m", "firnlight", "night", str(folder / workflow), "--quiet"]
     process = subprocess.Popen(command, stdout=subprocess.DEVNULL)
     peak_kib = 0
     while process.poll() is None:
@@ -60,7 +65,7 @@ def floor(folder: Path, workers: int) -> float:
     grid: Grid = grid_of(inputs[0])
     windows = list(grid.windows(*BLOCK))
     cells = {}
-    for name in layer_names():
+    for name in day_layers():
         with rasterio.open(maps / f"{name}.tif") as dataset:
             cells[name] = dataset.read()
     begun = time.perf_counter()
@@ -79,7 +84,7 @@ def floor(folder: Path, workers: int) -> float:
 
     with ThreadPoolExecutor(workers) as pool:
         list(pool.map(decode, inputs))
-        list(pool.map(encode, layer_names()))
+        list(pool.map(encode, day_layers()))
     return time.perf_counter() - begun
 
 
@@ -93,18 +98,35 @@ def main() -> None:
         folder = Path(scratch) / "area"
         demo = ["demo", str(folder), "--tiles", "1", "--size", str(chosen.size), "--scenes", "1"]
         subprocess.run([sys.executable, "-m", "firnlight", *demo], check=True, stdout=subprocess.DEVNULL)
+        text = (folder / "workflow.toml").read_text(encoding="utf-8")
+        for name, terrain in (("flat", "false"), ("terrain", "true")):
+            changed = re.sub(r"terrain = \w+", f"terrain = {terrain}", text).replace(
+                'path = "store"', f'path = "store_{name}"'
+            )
+            (folder / f"{name}.toml").write_text(changed, encoding="utf-8")
         night(folder)  # compiles the kernels
-        nights, peaks, floors = [], [], []
+        first, first_peak = night(folder, "terrain.toml")
+        night(folder, "flat.toml")
+        times: dict[str, list[float]] = {"floor": [], "night": [], "flat": [], "terrain": []}
+        peaks, terrain_peaks = [], [first_peak]
         for _ in range(chosen.rounds):
-            floors.append(floor(folder, workers))
+            times["floor"].append(floor(folder, workers))
             seconds, peak = night(folder)
-            nights.append(seconds)
+            times["night"].append(seconds)
             peaks.append(peak)
-    a, b = statistics.median(floors), statistics.median(nights)
+            times["flat"].append(night(folder, "flat.toml", after_the_first=True)[0])
+            seconds, peak = night(folder, "terrain.toml", after_the_first=True)
+            times["terrain"].append(seconds)
+            terrain_peaks.append(peak)
+    a, b, c, d = (statistics.median(one) for one in times.values())
+    said = {name: [round(x, 1) for x in one] for name, one in times.items()}
     print(json.dumps({"size": chosen.size, "workers": workers, "machine": platform.processor() or platform.machine()}))
-    print(f"(a) decode inputs + encode outputs alone: {a:.1f} s (of {[round(x, 1) for x in floors]})")
-    print(f"(b) firnlight night, whole process:       {b:.1f} s (of {[round(x, 1) for x in nights]})")
+    print(f"(a) decode inputs + encode outputs alone: {a:.1f} s (of {said['floor']})")
+    print(f"(b) firnlight night, whole process:       {b:.1f} s (of {said['night']})")
     print(f"b / a = {b / a:.2f};  peak memory of b: {np.max(peaks):.0f} MiB")
+    print(f"(c) flat night after the first:           {c:.1f} s (of {said['flat']})")
+    print(f"(d) night with terrain after the first:   {d:.1f} s (of {said['terrain']}); the first one {first:.1f} s")
+    print(f"d / c = {d / c:.2f};  peak memory of d: {np.max(terrain_peaks):.0f} MiB")
 
 
 if __name__ == "__main__":

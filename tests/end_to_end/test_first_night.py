@@ -8,7 +8,7 @@ import pystac
 import pytest
 import rasterio
 
-from firnlight.core.layers import layer, layer_names
+from firnlight.core.layers import day_layers, layer
 from firnlight.io.sheets import read_totals
 
 FILL = -32768
@@ -20,7 +20,7 @@ def days(area):
 
 def maps_of(folder):
     out = {}
-    for name in layer_names():
+    for name in day_layers():
         with rasterio.open(folder / f"{name}.tif") as dataset:
             out[name] = dataset.read()
     return out
@@ -35,7 +35,7 @@ def test_every_scene_becomes_all_layers_and_totals(area):
     assert len(days(area)) == 4
     for folder in days(area):
         assert {path.name for path in folder.iterdir()} == {
-            *(f"{n}.tif" for n in layer_names()),
+            *(f"{n}.tif" for n in day_layers()),
             "scene.json",
         }
     assert len(list((area.store / "budget").rglob("*.parquet"))) == 4
@@ -44,7 +44,7 @@ def test_every_scene_becomes_all_layers_and_totals(area):
 
 def test_maps_are_cogs_that_say_what_they_hold(done_area):
     for folder in days(done_area):
-        for name in layer_names():
+        for name in day_layers():
             about = layer(name)
             with rasterio.open(folder / f"{name}.tif") as dataset:
                 assert dataset.tags(ns="IMAGE_STRUCTURE")["LAYOUT"] == "COG"
@@ -60,7 +60,7 @@ def test_maps_are_cogs_that_say_what_they_hold(done_area):
 def test_items_are_stac_and_lead_back_to_the_scenes(done_area):
     for folder in days(done_area):
         item = pystac.Item.from_file(str(folder / "scene.json"))
-        assert set(item.assets) == {*layer_names(), "budget"}
+        assert set(item.assets) == {*day_layers(), "budget"}
         for asset in item.assets.values():
             assert (folder / asset.href).resolve().stat().st_size == asset.extra_fields["file:size"]
         sources = [link for link in item.links if link.rel == "derived_from"]

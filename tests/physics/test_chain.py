@@ -10,8 +10,8 @@ from firnlight.core.lattice import Lattice
 from firnlight.core.layers import layer
 from firnlight.core.settings import Albedo, Conversions
 from firnlight.physics import chain
-from firnlight.physics.chain_fast import albedo_block, flux_block
-from firnlight.stages.albedo import albedo_numbers, empty_layers
+from firnlight.physics.chain_fast import absorbed_block, albedo_block, carry_block, net_block
+from firnlight.stages.albedo import albedo_numbers, carried_share, empty_layers
 
 FLAGS = layer("quality").flags
 BITS = {name: 1 << n for n, name in enumerate(FLAGS)}
@@ -63,39 +63,84 @@ def test_albedo_kernel_equals_the_plain_chain(seed, pair, fraction):
 
 @given(st.integers(0, 2**32 - 1))
 @settings(deadline=None, max_examples=25)
-def test_flux_kernel_equals_the_plain_chain_and_closes(seed):
+def test_carry_kernel_equals_the_plain_chain(seed):
     rng = np.random.default_rng(seed)
     window = Window(int(rng.integers(0, 60)), int(rng.integers(0, 60)), 23, 37)
     shape = (window.rows, window.cols)
     albedo = rng.integers(0, 10001, shape).astype(np.int16)
     albedo[rng.random(shape) < 0.1] = FILL
     albedo_u = rng.integers(0, 900, (4, *shape)).astype(np.int16)
-    elevation = rng.uniform(-600, 5000, shape).astype(np.float32)
-    elevation[rng.random(shape) < 0.05] = np.nan
-    first = rng.uniform(0, 500, (8, 8, 22, 1)) * (rng.random((8, 8, 1, 1)) < 0.9)
-    moments = Lattice(16, 16, np.concatenate([first * 0.1**k for k in range(4)], axis=-1))
-    fast = [np.empty(shape, np.int16) for _ in range(3)]
-    flux_block(
-        albedo,
-        albedo_u,
-        elevation,
-        window.row,
-        window.col,
-        moments.values,
-        16,
-        16,
-        -500.0,
-        250.0,
-        0.05,
-        np.int16(FILL),
-        *fast,
-    )
-    plain = chain.flux_block(albedo, albedo_u, elevation, window, moments, -500.0, 250.0, 0.05, FILL)
+    albedo_u[:, albedo == FILL] = FILL
+    snowy = rng.random(shape) < 0.5
+    shapes = Lattice(16, 16, rng.uniform([0, 0, 0.7, 0.7], [0.5, 0.5, 1.4, 1.4], (8, 8, 4)))
+    plain = chain.carry_block(albedo, albedo_u, snowy, shapes, window, FILL)
+    carry_block(
+        albedo, albedo_u, np.where(snowy, BITS["snow"], 0).astype(np.uint8), np.uint8(BITS["snow"]), shapes.values, 16, 16,
+        window.row, window.col, carried_share(), np.int16(FILL),
+    )  # fmt: skip
+    for got, name in ((albedo, "albedo"), (albedo_u, "albedo_u")):
+        assert ((got == FILL) == (plain[name] == FILL)).all()
+        close(got, plain[name])
+
+
+@given(st.integers(0, 2**32 - 1))
+@settings(deadline=None, max_examples=25)
+def test_absorbed_kernel_equals_the_plain_chain_and_closes(seed):
+    rng = np.random.default_rng(seed)
+    shape = (23, 37)
+    albedo, insolation = rng.integers(0, 10001, shape).astype(np.int16), rng.integers(0, 30001, shape).astype(np.int16)
+    albedo[rng.random(shape) < 0.1] = FILL
+    insolation[rng.random(shape) < 0.1] = FILL
+    albedo_u = rng.integers(0, 900, (4, *shape)).astype(np.int16)
+    fast = [np.empty(shape, np.int16) for _ in range(2)]
+    absorbed_block(albedo, albedo_u, insolation, 0.05, 0.03, np.int16(FILL), 30000.0, *fast)
+    plain = chain.absorbed_block(albedo, albedo_u, insolation, 0.05, 0.03, FILL, 30000)
     for got, name in zip(fast, plain, strict=True):
         assert ((got == FILL) == (plain[name] == FILL)).all()
         close(got, plain[name])
     seen = fast[0] != FILL
-    assert ((fast[1][seen] >= 0) & (fast[1][seen] <= fast[0][seen])).all()
+    assert (seen == ((albedo != FILL) & (insolation != FILL))).all()
+    assert ((fast[0][seen] >= 0) & (fast[0][seen] <= insolation[seen])).all()
+
+
+@given(st.integers(0, 2**32 - 1), st.booleans())
+@settings(deadline=None, max_examples=25)
+def test_net_kernel_equals_the_plain_chain_and_closes(seed, on_slopes):
+    rng = np.random.default_rng(seed)
+    window = Window(int(rng.integers(0, 60)), int(rng.integers(0, 60)), 23, 37)
+    shape = (window.rows, window.cols)
+    absorbed = rng.integers(0, 6000, shape).astype(np.int16)
+    absorbed[rng.random(shape) < 0.1] = FILL
+    absorbed_u = rng.integers(0, 900, shape).astype(np.int16)
+    quality = np.where(rng.random(shape) < 0.5, BITS["snow"], 0).astype(np.uint8)
+    elevation = rng.uniform(-600, 5000, shape).astype(np.float32)
+    elevation[rng.random(shape) < 0.05] = np.nan
+    covers = rng.integers(1, 4, shape).astype(np.uint8)
+    emissivity = np.array([0.99, 0.97, 0.95, 0.98])
+    nodes = rng.uniform(150, 400, (8, 8, 22, 3))
+    nodes[7, 7] = np.nan
+    longwave = Lattice(16, 16, nodes)
+    slope = rng.integers(0, 7501, shape).astype(np.int16) if on_slopes else np.empty((0, 0), np.int16)
+    sky_view = rng.integers(0, 10001, shape).astype(np.int16) if on_slopes else np.empty((0, 0), np.int16)
+    cosine = np.cos(np.radians(np.arange(8001) * 0.01))
+    fast = [np.empty(shape, np.int16) for _ in range(3)]
+    net_block(
+        absorbed, absorbed_u, quality, np.uint8(BITS["snow"]), elevation, covers, emissivity, slope, sky_view, cosine,
+        window.row, window.col, nodes, 16, 16, -500.0, 250.0, 8.0, 4.0, np.int16(FILL), 10000.0, 30000.0, *fast,
+    )  # fmt: skip
+    snowy = quality != 0
+    view = sky_view / 10000.0 / cosine[slope] if on_slopes else np.ones(shape)
+    plain = chain.net_block(
+        absorbed, absorbed_u, snowy, elevation, np.where(snowy, emissivity[0], emissivity[covers]), view, window, longwave,
+        -500.0, 250.0, 8.0, 4.0, FILL, 10000, 30000,
+    )  # fmt: skip
+    for got, name in zip(fast, plain, strict=True):
+        assert ((got == FILL) == (plain[name] == FILL)).all()
+        close(got, plain[name])
+    seen = fast[0] != FILL
+    assert seen.any()
+    assert (fast[1][seen].astype(int) == absorbed[seen].astype(int) + fast[0][seen]).all()
+    assert (fast[1][~seen] == FILL).all()
 
 
 def test_a_value_beyond_the_limits_is_flagged_and_not_used():

@@ -25,6 +25,8 @@ class Layer:
     low, high : smallest and largest stored integer that may occur.
     parts : names of the bands of the file, in order.
     flags : bit -> meaning, for flag layers.
+    wanted_with : what the workflow must ask for to get it ("terrain", "longwave"; "" = always), or "once" for what
+        lies under terrain/ and belongs to no day.
     """
 
     name: str
@@ -39,6 +41,7 @@ class Layer:
     parts: tuple[str, ...]
     flags: tuple[str, ...]
     overviews: str
+    wanted_with: str
 
     def values(self, stored: NDArray[Any]) -> NDArray[np.float64]:
         """Stored integers to values [unit]; NaN where unseen."""
@@ -65,13 +68,20 @@ def layer(name: str) -> Layer:
         parts=tuple(row.get("parts", (name,))),
         flags=tuple(row.get("flags", ())),
         overviews=row.get("overviews", "average"),
+        wanted_with=row.get("wanted_with", ""),
     )
 
 
 @cache
+def day_layers(*wanted: str) -> tuple[str, ...]:
+    """Names of the layers of a tile-day, in the order they are written, for a workflow that asks for `wanted`."""
+    return tuple(name for name in load_table("layers").rows if layer(name).wanted_with in ("", *wanted))
+
+
+@cache
 def layer_names() -> tuple[str, ...]:
-    """Names of the map layers in the order they are written."""
-    return tuple(load_table("layers").rows)
+    """Names of all layers that a tile-day can have, in the order they are written."""
+    return day_layers("terrain", "longwave")
 
 
 @cache

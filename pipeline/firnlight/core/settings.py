@@ -40,6 +40,7 @@ class Scenes(_Section):
 
 class Surface(_Section):
     elevation: str | None = None
+    wider_elevation: str | None = None
     land_cover: str | None = None
     classes: dict[str, str] = {}
 
@@ -91,20 +92,99 @@ class Albedo(_Section):
     conversion: Conversions = Conversions()
     snow_fraction: str = "gascoin_2020"
     anisotropy: Literal["none"] = "none"
+    day: Literal["overpass", "sun path"] = "overpass"
+    illumination: Literal["none", "c", "scs+c"] = "none"
+    illumination_over_snow: bool = False
+
+
+class GridFile(_Section):
+    """A file of grids (NetCDF, Zarr, GeoTIFF); {date} and {year} in its path become the day's.
+
+    The rest says what the file itself does not: what a time stands for, units, lengths and starts of accumulation.
+    """
+
+    grid: str
+    label: Literal["start", "end", "middle", "instant"] | None = None
+    units: str | None = None
+    step_hours: Annotated[float, Field(gt=0, le=24)] | None = None
+    accumulated: Literal["interval", "since start"] | None = None
+    starts_hours: tuple[float, ...] | None = Field(default=None, strict=False)
+    crs: str | None = None
+
+
+class GridField(GridFile):
+    variable: str | None = None
+
+
+class StationSource(_Section):
+    station: str
+
+
+class SuppliedGrid(GridField):
+    elevation: str | GridField | None = None  # height of the grid's own ground: a variable beside it, or another file
 
 
 class AtmosphereSettings(_Section):
-    aerosol_500nm: Annotated[float, Field(ge=0, le=3)] = 0.1
-    aerosol_380nm: Annotated[float, Field(ge=0, le=5)] | None = None
-    water_vapour_cm: Annotated[float, Field(ge=0, le=10)] = 1.0
-    ozone_cm: Annotated[float, Field(ge=0, le=1)] = 0.3
+    aerosol_500nm: Annotated[float, Field(ge=0, le=3)] | GridField = 0.1
+    aerosol_380nm: Annotated[float, Field(ge=0, le=5)] | GridField | None = None
+    water_vapour_cm: Annotated[float, Field(ge=0, le=10)] | GridField = 1.0
+    ozone_cm: Annotated[float, Field(ge=0, le=1)] | GridField = 0.3
 
 
 class Insolation(_Section):
-    source: Literal["clear-sky"] = "clear-sky"
+    source: Literal["clear-sky"] | SuppliedGrid | StationSource = "clear-sky"
+    cloud: GridField | None = None
     atmosphere: AtmosphereSettings = AtmosphereSettings()
-    terrain: Literal[False] = False
+    terrain: bool = False
     relative_uncertainty: Annotated[float, Field(ge=0, le=1)] = 0.05
+    local_uncertainty: Annotated[float, Field(ge=0, le=1)] = 0.0
+
+    @model_validator(mode="after")
+    def _cloud_once(self) -> Insolation:
+        if self.cloud is not None and self.source != "clear-sky":
+            raise ValueError('`cloud` goes with source = "clear-sky" only: a supplied series holds its cloud already')
+        return self
+
+
+class WeatherGrid(GridFile):
+    air_temperature: str
+    vapour_pressure: str | None = None
+    dew_point: str | None = None
+    relative_humidity: str | None = None
+    cloud_fraction: str | None = None
+    elevation: str | GridField | None = None
+
+    @model_validator(mode="after")
+    def _one_humidity(self) -> WeatherGrid:
+        if sum(one is not None for one in (self.vapour_pressure, self.dew_point, self.relative_humidity)) != 1:
+            raise ValueError("name exactly one of vapour_pressure, dew_point, relative_humidity")
+        return self
+
+
+class Longwave(_Section):
+    source: WeatherGrid
+    method: str = "prata1996"
+    cloud: str = "unsworth_monteith1975"
+    lapse_k_per_m: Annotated[float, Field(ge=-0.02, le=0.02)] = 0.0065
+    emissivity: dict[str, Annotated[float, Field(ge=0.5, le=1)]] = {}
+    uncertainty_wm2: Annotated[float, Field(ge=0, le=200)] = 10.0
+    local_uncertainty_wm2: Annotated[float, Field(ge=0, le=200)] = 5.0
+
+
+class Uncertainty(_Section):
+    correlation_length_m: Annotated[float, Field(ge=1000, le=1e6)] = 5000.0
+
+
+class Station(_Section):
+    file: str
+    longitude: Annotated[float, Field(ge=-360, le=360)]
+    latitude: Annotated[float, Field(ge=-90, le=90)]
+    elevation_m: Annotated[float, Field(ge=-500, le=9000)]
+    sensor_height_m: Annotated[float, Field(ge=0, le=100)] = 2.0
+    time: str = "time_utc"
+    sw_down: str = "sw_down_wm2"
+    label: Literal["start", "end", "middle"] = "start"
+    utc_offset_h: Annotated[float, Field(ge=-14, le=14)] = 0.0
 
 
 class StoreSettings(_Section):
@@ -149,8 +229,31 @@ class Workflow(_Section):
     regions: Regions = Regions()
     albedo: Albedo = Albedo()
     insolation: Insolation = Insolation()
+    longwave: Longwave | None = None
+    uncertainty: Uncertainty = Uncertainty()
+    stations: dict[str, Station] = {}
     store: StoreSettings
     engine: Engine = Engine()
+
+    @model_validator(mode="after")
+    def _known_station(self) -> Workflow:
+        source = self.insolation.source
+        if isinstance(source, StationSource) and source.station not in self.stations:
+            known = ", ".join(self.stations) or "none"
+            raise ValueError(f"insolation.source names station {source.station!r}; there is [stations.*]: {known}")
+        if self.needs_relief and self.surface.elevation is None:
+            raise ValueError("insolation.terrain and albedo.illumination need surface.elevation")
+        return self
+
+    @property
+    def needs_relief(self) -> bool:
+        """Whether slope, horizon and sky view of the ground are used."""
+        return self.insolation.terrain or self.albedo.illumination != "none"
+
+    @property
+    def wanted(self) -> tuple[str, ...]:
+        """What is asked for beside the layers that every night makes."""
+        return ("terrain",) * self.insolation.terrain + ("longwave",) * (self.longwave is not None)
 
     def path(self, written: str) -> Path:
         """A path of the file as an absolute one."""
@@ -193,21 +296,23 @@ def _line_of(text: str, keys: tuple[str, ...]) -> int | None:
 
 def _known_names(keys: tuple[str, ...]) -> list[str]:
     """Names allowed beside the last of `keys`."""
-    model: Any = Workflow
+    models: list[Any] = [Workflow]
     for key in keys[:-1]:
-        field = next((f for n, f in model.model_fields.items() if key in (n, f.alias)), None)
-        kinds = getattr(field.annotation, "__args__", (field.annotation,)) if field else ()
-        model = next((k for k in kinds if isinstance(k, type) and issubclass(k, BaseModel)), None)
-        if model is None:
-            return []
-    return [f.alias or n for n, f in model.model_fields.items() if n != "file"]
+        fields = [f for model in models for n, f in model.model_fields.items() if key in (n, f.alias)]
+        kinds = [kind for f in fields for kind in (f.annotation, *getattr(f.annotation, "__args__", ()))]
+        models = [k for k in kinds if isinstance(k, type) and issubclass(k, BaseModel)]
+    return list(dict.fromkeys(f.alias or n for model in models for n, f in model.model_fields.items() if n != "file"))
+
+
+def _is_kind(part: str) -> bool:
+    """Whether a part of an error's place names a type, not a key of the file."""
+    return bool(re.fullmatch(r"literal\[.*|(constrained|function)-.*|int|str|float|bool|none|dict\[.*|[A-Z]\w*", part))
 
 
 def _problem(path: Path, text: str, error: ValidationError) -> SettingsProblem:
     # an unknown key is likelier a misspelt one than the missing key beside it
     first = min(error.errors(), key=lambda one: one["type"] != "extra_forbidden")
-    # names of union members and model wrappers in `loc` are not keys of the file
-    keys = tuple(str(part) for part in first["loc"] if not str(part).startswith(("literal", "constrained", "int", "str")))
+    keys = tuple(str(part) for part in first["loc"] if not _is_kind(str(part)))
     line = _line_of(text, keys)
     where = f"{path}, line {line}" if line else str(path)
     name = ".".join(keys)
@@ -219,6 +324,8 @@ def _problem(path: Path, text: str, error: ValidationError) -> SettingsProblem:
     if first["type"] == "missing":
         return SettingsProblem(where, name, "nothing", "a value", f"add {keys[-1]} to [{'.'.join(keys[:-1]) or keys[-1]}]")
     message = first["msg"].removeprefix("Value error, ").removeprefix("Input should be ")
+    if not keys:  # two sections that do not go together
+        return SettingsProblem(where, "settings", message, "settings that go together", "correct one of them")
     return SettingsProblem(where, name, repr(first["input"]), message, f"correct {name} in the workflow file")
 
 

@@ -3,14 +3,61 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, fields
-from typing import Any
+from collections.abc import Mapping
+from dataclasses import dataclass, field, fields, replace
+from functools import cached_property
+from operator import add
+from typing import Any, NamedTuple
 
+import numpy as np
+
+from firnlight.core.correlation import sum_variance
 from firnlight.core.layers import layer
 
 CM2_PER_KM2 = 10**10
+CM2_PER_M2 = 10**4
 SECONDS_PER_DAY = 86_400
 U_STEP_WM2 = 0.01  # step of the uncertainty sums
+SKY, LONGWAVE = "insolation", "net longwave"  # sources of shared errors, beside each sensor's calibration
+
+
+@dataclass(frozen=True, order=True)
+class BlockGrid:
+    """The blocks of ground over which locally correlated errors of one tile are summed.
+
+    Attributes
+    ----------
+    tile : name; blocks of two tiles are taken as independent.
+    block_m, length_m : side of a block, correlation length of the errors. [m]
+    """
+
+    tile: str
+    block_m: float
+    length_m: float
+
+
+Block = tuple[int, int]  # row and column of a block in its tile
+PLACES = 1024  # steps of a position along the side of a block
+
+
+class Near(NamedTuple):
+    """Locally correlated errors of the cells in one block of ground, and where in it they lie.
+
+    Attributes
+    ----------
+    albedo, sky, longwave : sum of local standard uncertainty x area. [0.01 W m-2 x m2]
+    area : [m2]
+    down, across : sum of position x area. [m2 x 1/1024 of the side]
+    square : sum of the squares of both x area. [m2 x (1/1024 of the side)^2]
+    """
+
+    albedo: int
+    sky: int
+    longwave: int
+    area: int
+    down: int
+    across: int
+    square: int
 
 
 @dataclass(frozen=True)
@@ -20,23 +67,29 @@ class Totals:
     Attributes
     ----------
     cells, area : seen cells and their ground area.
-    albedo, insolation, absorbed, snow_fraction : sum of stored value x area.
-    u_local, u_calibration, u_sky : sum of standard uncertainty of absorbed shortwave x area. [0.01 W m-2 x cm2]
-    u_noise2 : sum of the squares of (independent standard uncertainty x area).
+    albedo, insolation, terrain_light, absorbed, snow_fraction : sum of stored value x area.
+    net_longwave, net_area : the same of net longwave, and the area where it is known.
+    melt : sum over snow of net radiation above 0 x area.
+    u_noise2 : sum of the squares of (independent standard uncertainty of absorbed x area).
     limited_area : area where a small excess over 0 or 1 was set to the limit.
     unseen_cells, unseen_area, missing, cloud, shadow, saturated, low_sun, outside_range : what was not seen, and why.
     bins : seen area per albedo bin of 0.01.
+    shared : source of a shared error -> sum of its standard uncertainty x area, so that sums of rows, tiles and days
+        that share a source keep their covariance. [0.01 W m-2 x cm2]
+    local : locally correlated errors of one day per block of ground; those of albedo go on from day to day.
+    past : variance of the local errors of sky and of longwave of days that are over. [(0.01 W m-2 x m2)^2]
     """
 
     cells: int = 0
     area: int = 0
     albedo: int = 0
     insolation: int = 0
+    terrain_light: int = 0
     absorbed: int = 0
     snow_fraction: int = 0
-    u_local: int = 0
-    u_calibration: int = 0
-    u_sky: int = 0
+    net_longwave: int = 0
+    net_area: int = 0
+    melt: int = 0
     u_noise2: int = 0
     limited_area: int = 0
     unseen_cells: int = 0
@@ -48,15 +101,22 @@ class Totals:
     low_sun: int = 0
     outside_range: int = 0
     bins: tuple[int, ...] = ()
+    shared: Mapping[str, int] = field(default_factory=dict)
+    local: Mapping[BlockGrid, Mapping[Block, Near]] = field(default_factory=dict)
+    past: tuple[float, float] = (0.0, 0.0)
 
     @classmethod
-    def seen(cls, sums: dict[str, int], bins: tuple[int, ...]) -> Totals:
-        """From the columns of the zone kernel for seen cells."""
+    def seen(
+        cls, sums: dict[str, int], bins: tuple[int, ...], calibration: str, grid: BlockGrid, near: Mapping[Block, Near]
+    ) -> Totals:
+        """From the columns of the zone kernel for seen cells; `calibration` names the sensors whose error they share."""
         if not sums:
             return cls()
-        rest: dict[str, Any] = {k: v for k, v in sums.items() if not k.startswith("u_noise")}
+        rest: dict[str, Any] = {k: v for k, v in sums.items() if not k.startswith("u_")}
         squares = (sums["u_noise_hh"] << 56) + (sums["u_noise_hl"] << 29) + sums["u_noise_ll"]
-        return cls(bins=bins, u_noise2=squares, **rest)
+        shared = {f"calibration {calibration}": sums["u_calibration"], SKY: sums["u_sky"], LONGWAVE: sums["u_longwave"]}
+        kept = {name: value for name, value in shared.items() if value}
+        return cls(bins=bins, u_noise2=squares, shared=kept, local={grid: dict(near)} if near else {}, **rest)
 
     @classmethod
     def unseen(cls, sums: dict[str, int]) -> Totals:
@@ -68,12 +128,38 @@ class Totals:
         return cls(**renamed)
 
     def __add__(self, other: Totals) -> Totals:
-        sums = {f.name: getattr(self, f.name) + getattr(other, f.name) for f in fields(self) if f.name != "bins"}
+        sums = {name: getattr(self, name) + getattr(other, name) for name in SUM_NAMES}
         if self.bins and other.bins:
             bins = tuple(a + b for a, b in zip(self.bins, other.bins, strict=True))
         else:
             bins = self.bins or other.bins
-        return Totals(**sums, bins=bins)
+        shared = dict(self.shared)
+        for name, value in other.shared.items():
+            shared[name] = shared.get(name, 0) + value
+        past = self.past[0] + other.past[0], self.past[1] + other.past[1]
+        return Totals(**sums, bins=bins, shared=shared, local=_joined(self.local, other.local), past=past)
+
+    def end_of_day(self) -> Totals:
+        """The same totals once no more ground of their day will be added: weather's local errors are those of one day."""
+        sky, longwave = self._near_variances(1, 2)
+        local = {
+            grid: {at: near._replace(sky=0, longwave=0) for at, near in blocks.items() if near.albedo}
+            for grid, blocks in self.local.items()
+        }
+        return replace(self, local=local, past=(self.past[0] + sky, self.past[1] + longwave))
+
+    def _near_variances(self, *parts: int) -> list[float]:
+        """Variances of the local errors that are still per block, by their place in Near."""
+        total = np.zeros(len(parts))
+        for grid in sorted(self.local):
+            rows = [(*at, *near) for at, near in sorted(self.local[grid].items()) if any(near[n] for n in parts)]
+            table = np.array(rows, dtype=np.float64).reshape(-1, 2 + len(Near._fields))
+            area, square = np.maximum(table[:, 5], 1.0), table[:, 8]
+            centres = table[:, 6:8] / area[:, np.newaxis] / PLACES
+            spread = np.maximum(square / area / PLACES**2 - (centres**2).sum(axis=1), 0.0)
+            sums = table[:, [2 + n for n in parts]]
+            total += sum_variance(table[:, :2].astype(np.int64), sums, centres, spread, grid.block_m, grid.length_m)
+        return total.tolist()
 
     @property
     def reflected(self) -> int:
@@ -113,15 +199,32 @@ class Totals:
         """Independent part of the mean's standard uncertainty. [W m-2]"""
         return math.sqrt(self.u_noise2) / self.area * U_STEP_WM2 if self.area else math.nan
 
+    def _from_near(self, variance: float) -> float:
+        return math.sqrt(variance) * 1e4 / self.area * U_STEP_WM2 if self.area else math.nan
+
+    @cached_property
+    def _u_local(self) -> tuple[float, float, float]:
+        """Locally correlated parts: of albedo, one error through all days; of sky and longwave, another each day."""
+        albedo, sky, longwave = self._near_variances(0, 1, 2)
+        return (
+            self._from_near(albedo),
+            self._from_near(self.past[0] + sky),
+            self._from_near(self.past[1] + longwave),
+        )
+
     @property
     def absorbed_u_local(self) -> float:
-        """Locally correlated part, taken as fully correlated over the whole: an upper bound. [W m-2]"""
-        return self._mean(self.u_local, U_STEP_WM2)
+        """Locally correlated part of the mean's standard uncertainty: of albedo and of the sky. [W m-2]"""
+        return math.hypot(*self._u_local[:2])
+
+    def _shared(self, *, longwave: bool) -> float:
+        """Shared parts: one error per source, sources independent of each other. [W m-2]"""
+        parts = [value for name, value in self.shared.items() if longwave or name != LONGWAVE]
+        return math.hypot(*(self._mean(value, U_STEP_WM2) for value in parts)) if self.area else math.nan
 
     @property
     def absorbed_u_shared(self) -> float:
-        """Shared part: sensor calibration and clear-sky model, independent of each other. [W m-2]"""
-        return math.hypot(self._mean(self.u_calibration, U_STEP_WM2), self._mean(self.u_sky, U_STEP_WM2))
+        return self._shared(longwave=False)
 
     @property
     def absorbed_u(self) -> float:
@@ -132,12 +235,37 @@ class Totals:
         """Standard uncertainty of reflected / incoming: the parts that come from albedo, over the insolation."""
         if not self.insolation:
             return math.nan
-        from_albedo = (
-            self.absorbed_u_independent,
-            self.absorbed_u_local,
-            self._mean(self.u_calibration, U_STEP_WM2),
-        )
-        return math.hypot(*from_albedo) / self.insolation_wm2
+        calibration = [self._mean(value, U_STEP_WM2) for name, value in self.shared.items() if name not in (SKY, LONGWAVE)]
+        return math.hypot(self.absorbed_u_independent, self._u_local[0], *calibration) / self.insolation_wm2
+
+    @property
+    def net_is_known(self) -> bool:
+        """Whether net longwave is known of all that was seen: a mean over other ground would not close."""
+        return bool(self.area) and self.net_area == self.area
+
+    @property
+    def net_longwave_wm2(self) -> float:
+        return self._mean(self.net_longwave, layer("net_longwave").step) if self.net_is_known else math.nan
+
+    @property
+    def net_radiation_wm2(self) -> float:
+        whole = self.absorbed + self.net_longwave
+        return self._mean(whole, layer("net_radiation").step) if self.net_is_known else math.nan
+
+    @property
+    def net_radiation_u(self) -> float:
+        if not self.net_is_known:
+            return math.nan
+        return math.hypot(self.absorbed_u_independent, *self._u_local, self._shared(longwave=True))
+
+    @property
+    def terrain_light_wm2(self) -> float:
+        return self._mean(self.terrain_light, layer("terrain_light").step)
+
+    @property
+    def melt_wm2(self) -> float:
+        """Mean over snow of the net radiation that can melt: that above 0, cell by cell. For totals of snow. [W m-2]"""
+        return self._mean(self.melt, layer("net_radiation").step) if self.net_is_known else math.nan
 
     @property
     def absorbed_gj(self) -> float:
@@ -156,3 +284,22 @@ class Totals:
                 return number * 0.01 + width * (goal - below) / weight
             below += weight
         return 1.0
+
+
+SUM_NAMES = tuple(f.name for f in fields(Totals) if f.type == "int")
+
+
+def _joined(
+    one: Mapping[BlockGrid, Mapping[Block, Near]], other: Mapping[BlockGrid, Mapping[Block, Near]]
+) -> dict[BlockGrid, Mapping[Block, Near]]:
+    """Sums per block of both."""
+    out = dict(one)
+    for grid, blocks in other.items():
+        if grid not in out:
+            out[grid] = blocks
+            continue
+        merged = dict(out[grid])
+        for at, near in blocks.items():
+            merged[at] = Near._make(map(add, merged[at], near)) if at in merged else near
+        out[grid] = merged
+    return out

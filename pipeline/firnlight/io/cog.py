@@ -96,6 +96,27 @@ class CogWriter:
         if failed is not None:
             raise _write_failure(self.path, failed)
 
+    @property
+    def scratch(self) -> Path:
+        """The plain raster of all blocks, to be read after `complete` and before `finish`."""
+        return self._raw
+
+    def complete(self) -> None:
+        """All blocks are written: what is in memory goes to the scratch file.
+
+        Raises
+        ------
+        OSError : it could not be written.
+        """
+        failed = None
+        with self._lock:
+            try:
+                self._dataset.close()
+            except rasterio.errors.RasterioError as error:
+                failed = str(error)
+        if failed is not None:
+            raise _write_failure(self.path, failed)
+
     def finish(self, threads: int = 1) -> Written:
         """Close, build the COG, open it again and check it; the map is not yet in place.
 

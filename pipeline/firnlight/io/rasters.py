@@ -108,3 +108,17 @@ def read_window(dataset: Any, window: Window, band: int = 1) -> NDArray[Any]:
         found = f"cells that cannot be read near row {window.row}, column {window.col}"
         fix = "deliver the file again: it is damaged or cut short"
         raise InputProblem(dataset.name, f"band {band}", found, "a whole file", fix) from None
+
+
+def read_bands(dataset: Any, window: Window, bands: list[int]) -> NDArray[Any]:
+    """The cells of some bands in a window: (bands, rows, cols).
+
+    Raises
+    ------
+    InputProblem : the file is damaged or cut short.
+    """
+    try:
+        return dataset.read(bands, window=RasterWindow(window.col, window.row, window.cols, window.rows))
+    except rasterio.errors.RasterioError:
+        found = f"cells that cannot be read near row {window.row}, column {window.col}"
+        raise InputProblem(dataset.name, "cells", found, "a whole file", "delete the file: it is made again") from None

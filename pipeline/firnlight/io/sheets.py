@@ -8,7 +8,7 @@ import io
 import json
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, fields
+from dataclasses import dataclass
 from decimal import Decimal
 from pathlib import Path
 from typing import Any
@@ -17,7 +17,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from firnlight.core.errors import InputProblem, SettingsProblem
-from firnlight.core.totals import Totals
+from firnlight.core.totals import SUM_NAMES, BlockGrid, Near, Totals
 from firnlight.io.atomic import move_into_place, replacing, scratch_path
 from firnlight.io.regions import ALL
 
@@ -27,8 +27,17 @@ _KEYS = ("region", "region_name", "land_cover", "snow", "band_low_m", "band_high
 _COUNTS = ("cells", "unseen_cells")
 _UNITS = {
     "albedo": "cm2 x 0.0001", "snow_fraction": "cm2 x 0.0001", "insolation": "cm2 x 0.1 W m-2",
-    "absorbed": "cm2 x 0.1 W m-2", "u_local": "cm2 x 0.01 W m-2", "u_calibration": "cm2 x 0.01 W m-2",
-    "u_sky": "cm2 x 0.01 W m-2", "u_noise2": "(cm2 x 0.01 W m-2)^2", "cells": "1", "unseen_cells": "1",
+    "terrain_light": "cm2 x 0.1 W m-2", "absorbed": "cm2 x 0.1 W m-2", "net_longwave": "cm2 x 0.1 W m-2",
+    "melt": "cm2 x 0.1 W m-2", "u_noise2": "(cm2 x 0.01 W m-2)^2", "cells": "1", "unseen_cells": "1",
+}  # fmt: skip
+# of each row: sources of shared errors with their sums, and blocks of ground with the sums of local errors and the
+# places of its cells
+_LISTS = {
+    "shared_source": (pa.string(), ""), "shared_sum": (_WIDE, "cm2 x 0.01 W m-2"),
+    "block_row": (pa.int32(), "1"), "block_col": (pa.int32(), "1"), "local_albedo": (pa.int64(), "m2 x 0.01 W m-2"),
+    "local_sky": (pa.int64(), "m2 x 0.01 W m-2"), "local_longwave": (pa.int64(), "m2 x 0.01 W m-2"),
+    "local_area": (pa.int64(), "m2"), "local_down": (pa.int64(), "m2 x 1/1024 of the block"),
+    "local_across": (pa.int64(), "m2 x 1/1024 of the block"), "local_square": (pa.int64(), "m2 x (1/1024 of the block)^2"),
 }  # fmt: skip
 
 
@@ -51,16 +60,13 @@ class Row:
         return self.region, self.land_cover, self.snow, low, high
 
 
-def _sum_names() -> list[str]:
-    return [f.name for f in fields(Totals) if f.name != "bins"]
-
-
 def _schema(metadata: Mapping[str, str]) -> pa.Schema:
     columns = [pa.field(name, pa.float64() if name.endswith("_m") else pa.string()) for name in _KEYS]
-    for name in _sum_names():
+    for name in SUM_NAMES:
         kind = pa.int64() if name in _COUNTS else _WIDE
         columns.append(pa.field(name, kind, metadata={"unit": _UNITS.get(name, "cm2")}))
     columns.append(pa.field("bins", pa.list_(pa.int64()), metadata={"unit": "cm2", "bins": "0.01 of albedo"}))
+    columns += [pa.field(name, pa.list_(kind), metadata={"unit": unit}) for name, (kind, unit) in _LISTS.items()]
     return pa.schema(columns, metadata=dict(metadata))
 
 
@@ -123,11 +129,37 @@ def prepare_totals(
         "scenes": json.dumps(scenes),
     }
     columns: dict[str, list[object]] = {name: [getattr(row, name) for row in rows] for name in _KEYS}
-    for name in _sum_names():
+    for name in SUM_NAMES:
         values = [getattr(row.totals, name) for row in rows]
         columns[name] = list(values) if name in _COUNTS else [Decimal(value) for value in values]
     columns["bins"] = [list(row.totals.bins) or None for row in rows]
+    columns.update(_list_columns([row.totals for row in rows]))
+    grids = {grid for row in rows for grid in row.totals.local}
+    metadata["firnlight:blocks"] = json.dumps([[grid.block_m, grid.length_m] for grid in sorted(grids)])
     return Sheet(path, pa.table(columns, schema=_schema(metadata)))
+
+
+def _list_columns(totals: Sequence[Totals]) -> dict[str, list[object]]:
+    columns: dict[str, list[object]] = {name: [] for name in _LISTS}
+    for one in totals:
+        sources = sorted(one.shared.items())
+        blocks = sorted((at, near) for grid in one.local.values() for at, near in grid.items())
+        lists = (
+            [name for name, _ in sources],
+            [Decimal(value) for _, value in sources],
+            *([at[n] for at, _ in blocks] for n in range(2)),
+            *([near[n] for _, near in blocks] for n in range(len(Near._fields))),
+        )
+        for name, values in zip(_LISTS, lists, strict=True):
+            columns[name].append(values)
+    return columns
+
+
+def _from_lists(data: Mapping[str, Sequence[Any]], n: int, grid: BlockGrid | None) -> dict[str, Any]:
+    shared = {name: int(value) for name, value in zip(data["shared_source"][n], data["shared_sum"][n], strict=True)}
+    parts = (data[name][n] for name in list(_LISTS)[2:])
+    blocks = {(i, j): Near(*near) for i, j, *near in zip(*parts, strict=True)}
+    return {"shared": shared, "local": {grid: blocks} if grid is not None and blocks else {}}
 
 
 @dataclass(frozen=True)
@@ -153,16 +185,19 @@ def read_totals(path: Path) -> DayTotals:
         table = pq.read_table(path, partitioning=None)
         meta = {k.decode(): v.decode() for k, v in (table.schema.metadata or {}).items()}
         data = table.to_pydict()
+        blocks = json.loads(meta["firnlight:blocks"])
+        grid = BlockGrid(meta["tile"], *blocks[0]) if blocks else None
         rows = []
         for n in range(table.num_rows):
-            sums = {name: int(data[name][n]) for name in _sum_names()}
+            sums: dict[str, Any] = {name: int(data[name][n]) for name in SUM_NAMES}
             keys = {name: data[name][n] for name in _KEYS}
-            rows.append(Row(**keys, totals=Totals(**sums, bins=tuple(data["bins"][n] or ()))))
+            totals = Totals(**sums, bins=tuple(data["bins"][n] or ()), **_from_lists(data, n, grid))
+            rows.append(Row(**keys, totals=totals))
         return DayTotals(
             meta["tile"], dt.date.fromisoformat(meta["day"]), meta["firnlight:key"], meta["firnlight:strata"],
             tuple(json.loads(meta["scenes"])), tuple(rows),
         )  # fmt: skip
-    except (pa.ArrowException, OSError, KeyError, ValueError) as error:
+    except (pa.ArrowException, OSError, KeyError, ValueError, TypeError) as error:
         raise InputProblem(
             str(path), "totals", str(error) or type(error).__name__, "a totals file of this store",
             "delete the file: the next night makes it again from the maps",

@@ -9,8 +9,8 @@ from numpy.typing import NDArray
 
 from firnlight.core.grid import Window
 from firnlight.core.lattice import Lattice
+from firnlight.physics.angle_albedo import carried_u, carry
 from firnlight.physics.broadband import Conversion, albedo, uncertainty_parts
-from firnlight.physics.clearsky import day_mean_insolation
 from firnlight.physics.snow import is_snow, ndsi, snow_fraction, snow_limits
 
 Arrays = dict[str, NDArray[Any]]
@@ -94,54 +94,135 @@ def albedo_block(
     }
 
 
-def flux_block(
+def carry_block(
     albedo_stored: NDArray[np.int16],
     albedo_u_stored: NDArray[np.int16],
-    elevation_m: NDArray[np.float32],
+    snowy: NDArray[np.bool_],
+    shapes: Lattice,
     window: Window,
-    moments: Lattice,
-    level0_m: float,
-    level_step_m: float,
-    relative_u: float,
     fill: int,
 ) -> Arrays:
-    """Insolation, absorbed shortwave and its uncertainty of a block, from stored albedo.
+    """Albedo seen at the overpass to the day's reflected over incoming light.
 
     Parameters
     ----------
-    albedo_stored : (y, x); albedo_u_stored : (4, y, x).
-    elevation_m : (y, x); NaN or outside the levels gives an unseen cell. [m]
-    moments : lattice of (levels, orders): time mean of G0 r^k, see clearsky.day_moments. [W m-2]
-    level0_m, level_step_m : heights of the levels. [m]
-    relative_u : relative standard uncertainty of insolation, shared by all cells.
+    albedo_stored : (y, x); albedo_u_stored : (4, y, x); snowy : (y, x).
+    shapes : lattice of 4 numbers of angle_albedo: of snow at the overpass, of snow through the day, the same of ground.
 
     Returns
     -------
-    insolation, absorbed_shortwave, absorbed_shortwave_u : (y, x) int16 in steps of 0.1 W m-2.
+    albedo, albedo_u : as given, for the whole day; what carrying adds is counted as locally correlated.
+    """
+    here = shapes.at(window)
+    seen = albedo_stored != fill
+    a = np.where(seen, albedo_stored, 0) / 10000.0
+    of_snow = carry(a, here[..., 0], here[..., 1], "gardner_sharp")
+    of_ground = carry(a, here[..., 2], here[..., 3], "ross_li")
+    there = np.where(snowy, of_snow, of_ground)
+    noise, local, shared = (np.where(seen, albedo_u_stored[k], 0) / 10000.0 for k in (1, 2, 3))
+    local = np.sqrt(local**2 + carried_u(a, there) ** 2)
+    total = np.sqrt(noise**2 + local**2 + shared**2)
+
+    def stored(field: NDArray[np.float64]) -> NDArray[np.int16]:
+        return np.where(seen, _steps(field, 10000.0, 10000), np.int16(fill)).astype(np.int16)
+
+    return {"albedo": stored(there), "albedo_u": np.stack([stored(one) for one in (total, noise, local, shared)])}
+
+
+def absorbed_block(
+    albedo_stored: NDArray[np.int16],
+    albedo_u_stored: NDArray[np.int16],
+    insolation_stored: NDArray[np.int16],
+    shared_u: float,
+    local_u: float,
+    fill: int,
+    highest: int,
+) -> Arrays:
+    """Absorbed shortwave and its uncertainty of a block, from stored albedo and insolation.
+
+    Parameters
+    ----------
+    albedo_stored, insolation_stored : (y, x); albedo_u_stored : (4, y, x).
+    shared_u, local_u : relative standard uncertainty of insolation: shared by all cells, and correlated nearby.
+    highest : largest stored integer of an uncertainty.
+
+    Returns
+    -------
+    absorbed_shortwave, absorbed_shortwave_u : (y, x) int16 in steps of 0.1 W m-2.
         absorbed = insolation x (1 - albedo) of the stored integers, rounded once, so that reflected = insolation -
         absorbed closes exactly.
     """
-    nodes = moments.at(window)
-    level = (elevation_m.astype(np.float64) - level0_m) / level_step_m
-    seen = (albedo_stored != fill) & (level >= 0) & (level <= nodes.shape[2] - 1)
-    level = np.where(seen, level, 0.0)
-    low = np.minimum(level.astype(np.int64), nodes.shape[2] - 2)
-    share = (level - low)[..., np.newaxis]
-    rows, cols = np.indices(low.shape)
-    here = nodes[rows, cols, low] + (nodes[rows, cols, low + 1] - nodes[rows, cols, low]) * share
-    light = day_mean_insolation(here, np.where(seen, albedo_stored, 0) / 10000.0)
-    s = np.minimum(np.floor(light * 10.0 + 0.5), 8000).astype(np.int64)
+    seen = (albedo_stored != fill) & (insolation_stored != fill)
+    s = np.where(seen, insolation_stored, 0).astype(np.int64)
     dark = 10000 - np.where(seen, albedo_stored, 0).astype(np.int64)
     absorbed = (s * dark + 5000) // 10000
-    parts = [s * np.where(seen, albedo_u_stored[k], 0) / 100000.0 for k in (1, 2, 3)]
-    parts.append(s * dark / 100000.0 * relative_u)
-    total = np.sqrt(sum(part * part for part in parts))
+    noise, local, calibration = (s * np.where(seen, albedo_u_stored[k], 0) / 100000.0 for k in (1, 2, 3))
+    sky = s * dark / 100000.0
+    total = noise * noise + local * local + calibration * calibration
+    total = np.sqrt(total + sky * sky * (shared_u * shared_u + local_u * local_u))
 
     def stored(field: NDArray[Any]) -> NDArray[np.int16]:
         return np.where(seen, field, fill).astype(np.int16)
 
     return {
-        "insolation": stored(s),
         "absorbed_shortwave": stored(absorbed),
-        "absorbed_shortwave_u": stored(_steps(np.asarray(total), 10.0, 8000)),
+        "absorbed_shortwave_u": stored(_steps(np.asarray(total), 10.0, highest)),
+    }
+
+
+def net_block(
+    absorbed_stored: NDArray[np.int16],
+    absorbed_u_stored: NDArray[np.int16],
+    snowy: NDArray[np.bool_],
+    elevation_m: NDArray[np.float32],
+    emissivity: NDArray[np.float64],
+    view: NDArray[np.float64],
+    window: Window,
+    longwave: Lattice,
+    level0_m: float,
+    level_step_m: float,
+    shared_u: float,
+    local_u: float,
+    fill: int,
+    longest: int,
+    highest: int,
+) -> Arrays:
+    """Net longwave and net radiation of a block.
+
+    Parameters
+    ----------
+    snowy : (y, x) cells of snow, whose surface is never warmer than melting.
+    emissivity : (y, x) of the surface. [1]
+    view : (y, x) sky view over the cosine of the slope: a tilted cell trades longwave with the sky over its true area
+        and the part of it that sees sky; with terrain, taken to be as warm as the cell, it trades nothing. [1]
+    longwave : lattice of (levels, 3), day means: from the sky, sigma T^4 of snow, of other ground; NaN is a gap. [W m-2]
+    shared_u, local_u : standard uncertainty of net longwave. [W m-2]
+    longest, highest : largest stored integer of net longwave (either sign) and of an uncertainty.
+
+    Returns
+    -------
+    net_longwave = emissivity view (down - sigma T^4), net_radiation = absorbed + net_longwave of the stored integers,
+    net_radiation_u : (y, x) int16 in steps of 0.1 W m-2, `fill` where absorbed is, without height, or in a gap.
+    """
+    nodes = longwave.at(window)
+    level = (elevation_m.astype(np.float64) - level0_m) / level_step_m
+    inside = (level >= 0) & (level <= nodes.shape[2] - 1)
+    level = np.where(inside, level, 0.0)
+    low = np.minimum(level.astype(np.int64), nodes.shape[2] - 2)
+    share = (level - low)[..., np.newaxis]
+    rows, cols = np.indices(low.shape)
+    here = nodes[rows, cols, low] + (nodes[rows, cols, low + 1] - nodes[rows, cols, low]) * share
+    balance = (here[..., 0] - np.where(snowy, here[..., 1], here[..., 2])) * emissivity * view
+    seen = (absorbed_stored != fill) & inside & ~np.isnan(balance)
+    steps = np.clip(np.floor(np.where(seen, balance, 0.0) * 10.0 + 0.5), -longest, longest).astype(np.int64)
+    u = np.where(seen, absorbed_u_stored, 0) / 10.0
+    total = np.sqrt(u * u + shared_u * shared_u + local_u * local_u)
+
+    def stored(field: NDArray[Any]) -> NDArray[np.int16]:
+        return np.where(seen, field, fill).astype(np.int16)
+
+    return {
+        "net_longwave": stored(steps),
+        "net_radiation": stored(absorbed_stored.astype(np.int64) + steps),
+        "net_radiation_u": stored(_steps(total, 10.0, highest)),
     }

@@ -133,56 +133,120 @@ def albedo_block(
 
 
 @numba.njit(nogil=True, cache=True)
-def flux_block(
-    albedo, albedo_u, elevation, row0, col0, moments, row_step, col_step, level0_m, level_step_m,
-    relative_u, fill, insolation, absorbed, absorbed_u,
-):  # fmt: skip
-    """Insolation and absorbed shortwave of one block; see chain.flux_block for the contract."""
+def carry_block(albedo, albedo_u, quality, snow_bit, shapes, row_step, col_step, row0, col0, relative_u, fill):
+    """Albedo of the overpass to that of the day, in place; see chain.carry_block for the contract."""
     rows, cols = albedo.shape
-    _, node_cols, levels, orders = moments.shape
-    line = np.empty((node_cols, levels, orders))
-    m = np.empty(orders)
     for r in range(rows):
         i = (row0 + r) // row_step
         fr = ((row0 + r) - i * row_step) / row_step
-        j_first = col0 // col_step
-        j_last = (col0 + cols - 1) // col_step + 1
-        for j in range(j_first, j_last + 1):
-            for z in range(levels):
-                for n in range(orders):
-                    line[j, z, n] = moments[i, j, z, n] + (moments[i + 1, j, z, n] - moments[i, j, z, n]) * fr
+        for c in range(cols):
+            if albedo[r, c] == fill:
+                continue
+            j = (col0 + c) // col_step
+            fc = ((col0 + c) - j * col_step) / col_step
+            first = 0 if quality[r, c] & snow_bit else 2
+            seen = 0.0
+            whole = 0.0
+            for n in range(2):
+                k = first + n
+                top = shapes[i, j, k] + (shapes[i, j + 1, k] - shapes[i, j, k]) * fc
+                bottom = shapes[i + 1, j, k] + (shapes[i + 1, j + 1, k] - shapes[i + 1, j, k]) * fc
+                value = top + (bottom - top) * fr
+                if n == 0:
+                    seen = value
+                else:
+                    whole = value
+            a = albedo[r, c] / 10000.0
+            if first == 0:
+                overhead = 2 * a / (1 + seen + np.sqrt((1 + seen) * (1 + seen) - 4 * seen * a))
+                there = overhead + whole * overhead * (1 - overhead)
+            else:
+                there = a * (whole / seen)
+            there = min(max(there, 0.0), 1.0)
+            albedo[r, c] = np.int16(_step_int(there, 10000.0, 10000.0))
+            added = relative_u * abs(there - a)
+            local = albedo_u[2, r, c] / 10000.0
+            local = np.sqrt(local * local + added * added)
+            noise = albedo_u[1, r, c] / 10000.0
+            shared = albedo_u[3, r, c] / 10000.0
+            albedo_u[2, r, c] = np.int16(_step_int(local, 10000.0, 10000.0))
+            albedo_u[0, r, c] = np.int16(
+                _step_int(np.sqrt(noise * noise + local * local + shared * shared), 10000.0, 10000.0)
+            )
+
+
+@numba.njit(nogil=True, cache=True)
+def absorbed_block(
+    albedo, albedo_u, insolation, shared_u, local_u, fill, highest, absorbed, absorbed_u,
+):  # fmt: skip
+    """Absorbed shortwave of one block; see chain.absorbed_block for the contract."""
+    rows, cols = albedo.shape
+    for r in range(rows):
         for c in range(cols):
             stored = albedo[r, c]
-            height = np.float64(elevation[r, c])
-            level = (height - level0_m) / level_step_m
-            if stored == fill or not (0.0 <= level <= levels - 1.0):
-                insolation[r, c] = fill
+            s = np.int64(insolation[r, c])
+            if stored == fill or s == fill:
                 absorbed[r, c] = fill
                 absorbed_u[r, c] = fill
                 continue
-            z = min(int(level), levels - 2)
-            fz = level - z
-            j = (col0 + c) // col_step
-            fc = ((col0 + c) - j * col_step) / col_step
-            for n in range(orders):
-                low = line[j, z, n] + (line[j + 1, z, n] - line[j, z, n]) * fc
-                high = line[j, z + 1, n] + (line[j + 1, z + 1, n] - line[j, z + 1, n]) * fc
-                m[n] = low + (high - low) * fz
-            a = stored / 10000.0
-            total = 0.0
-            power = 1.0
-            for n in range(orders - 1):
-                total += power * m[n]
-                power *= a
-            if m[orders - 2] > 0.0:
-                total += power * m[orders - 1] / (1.0 - a * m[orders - 1] / m[orders - 2])
-            s = np.int64(_step_int(total, 10.0, 8000.0))
             dark = 10000 - np.int64(stored)
-            insolation[r, c] = np.int16(s)
             absorbed[r, c] = np.int16((s * dark + 5000) // 10000)
             u_noise = s * albedo_u[1, r, c] / 100000.0
             u_local = s * albedo_u[2, r, c] / 100000.0
             u_calibration = s * albedo_u[3, r, c] / 100000.0
-            u_sky = s * dark / 100000.0 * relative_u
-            u = np.sqrt(u_noise * u_noise + u_local * u_local + u_calibration * u_calibration + u_sky * u_sky)
-            absorbed_u[r, c] = np.int16(_step_int(u, 10.0, 8000.0))
+            u_sky = s * dark / 100000.0
+            u = u_noise * u_noise + u_local * u_local + u_calibration * u_calibration
+            u = np.sqrt(u + u_sky * u_sky * (shared_u * shared_u + local_u * local_u))
+            absorbed_u[r, c] = np.int16(_step_int(u, 10.0, highest))
+
+
+@numba.njit(nogil=True, cache=True)
+def net_block(
+    absorbed, absorbed_u, quality, snow_bit, elevation, covers, emissivity, slope, sky_view, cos_slope, row0, col0,
+    longwave, row_step, col_step, level0_m, level_step_m, shared_u, local_u, fill, longest, highest, net_longwave,
+    net, net_u,
+):  # fmt: skip
+    """Net longwave and net radiation of one block; see chain.net_block for the contract."""
+    rows, cols = absorbed.shape
+    _, _, levels, _ = longwave.shape
+    on_slopes = slope.shape[0] > 0
+    for r in range(rows):
+        i = (row0 + r) // row_step
+        fr = ((row0 + r) - i * row_step) / row_step
+        for c in range(cols):
+            net_longwave[r, c] = fill
+            net[r, c] = fill
+            net_u[r, c] = fill
+            level = (np.float64(elevation[r, c]) - level0_m) / level_step_m
+            if absorbed[r, c] == fill or not (0.0 <= level <= levels - 1.0):
+                continue
+            j = (col0 + c) // col_step
+            fc = ((col0 + c) - j * col_step) / col_step
+            z = min(int(level), levels - 2)
+            fz = level - z
+            snowy = (quality[r, c] & snow_bit) != 0
+            up = 1 if snowy else 2
+            balance = 0.0
+            for side in range(2):
+                n = 0 if side == 0 else up
+                top_low = longwave[i, j, z, n] + (longwave[i, j + 1, z, n] - longwave[i, j, z, n]) * fc
+                top_high = longwave[i, j, z + 1, n] + (longwave[i, j + 1, z + 1, n] - longwave[i, j, z + 1, n]) * fc
+                low = longwave[i + 1, j, z, n] + (longwave[i + 1, j + 1, z, n] - longwave[i + 1, j, z, n]) * fc
+                high = longwave[i + 1, j, z + 1, n]
+                high += (longwave[i + 1, j + 1, z + 1, n] - longwave[i + 1, j, z + 1, n]) * fc
+                top = top_low + (top_high - top_low) * fz
+                bottom = low + (high - low) * fz
+                value = top + (bottom - top) * fr
+                balance = value if side == 0 else balance - value
+            balance *= emissivity[0] if snowy else emissivity[covers[r, c]]
+            if on_slopes:
+                balance *= sky_view[r, c] / 10000.0 / cos_slope[slope[r, c]]
+            if balance != balance:
+                continue
+            steps = np.floor(balance * 10.0 + 0.5)
+            steps = min(max(steps, -longest), longest)
+            net_longwave[r, c] = np.int16(steps)
+            net[r, c] = np.int16(np.int64(absorbed[r, c]) + np.int64(steps))
+            u = absorbed_u[r, c] / 10.0
+            u = np.sqrt(u * u + shared_u * shared_u + local_u * local_u)
+            net_u[r, c] = np.int16(_step_int(u, 10.0, highest))

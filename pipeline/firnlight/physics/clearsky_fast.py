@@ -25,6 +25,7 @@ def _moments(declination, hour_at_zero, distance, parallax, latitude, longitude,
     tau = a1 * aod380 + a2 * aod500
     tau_power = tau**a3 * (1 + tau - tau**a4)
     places, levels, orders = out.shape
+    orders -= 1
     for z in range(levels):
         out[:, z, :] = 0.0 * pressure[z]  # NaN stays NaN in polar night too
     for n in range(places):
@@ -64,13 +65,19 @@ def _moments(declination, hour_at_zero, distance, parallax, latitude, longitude,
                 for k in range(orders):
                     out[n, z, k] += power
                     power *= sky
+                out[n, z, orders] += direct
     out /= declination.size
 
 
 def day_moments(day, latitude_deg, longitude_deg, elevation_m, atmosphere, orders=ORDERS, step_s=STEP_S):
     """Same contract as clearsky.day_moments."""
+    return day_light(day, latitude_deg, longitude_deg, elevation_m, atmosphere, orders, step_s)[..., :-1]
+
+
+def day_light(day, latitude_deg, longitude_deg, elevation_m, atmosphere, orders=ORDERS, step_s=STEP_S):
+    """Moments as clearsky.day_moments and, last, the day's mean direct light on flat ground: (n, m, orders + 1)."""
     ascension, declination, sidereal, distance = sun.ecliptic(day_times_unix_s(day, step_s))
-    out = np.empty((np.size(latitude_deg), np.size(elevation_m), orders))
+    out = np.empty((np.size(latitude_deg), np.size(elevation_m), orders + 1))
     _moments(
         declination,
         sidereal - ascension,

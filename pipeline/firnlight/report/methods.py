@@ -13,6 +13,7 @@ from firnlight.core.errors import SettingsProblem
 from firnlight.core.tables import load_table
 
 WIDTH = 100
+_EXPONENT = re.compile(r"\d+(\.\d+)?[eE][-+]?\d+")
 Entry = dict[str, Any]
 
 # The words of a formula; {field} and {field[0]} are numbers of the row. Symbols are explained in MEANING.
@@ -45,6 +46,11 @@ FORMULAS: dict[str, tuple[str, ...]] = {
     ),
     "kasten_1966": ("m = 1 / (cos(z) + {airmass[0]} ({airmass[1]} - z)^-{airmass[2]})",),
     "angstrom": ("tau_380 = tau_500 ({wavelengths_nm[0]} / {wavelengths_nm[1]})^-{exponent}",),
+    "kasten_czeplak_1980": (
+        "insolation under cloud = clear (1 - {factor} c^{power}) (1 - {ground_albedo} r) / (1 - {ground_albedo} r_s)",
+        "direct share = clear direct share (1 - c^{spread_power})",
+    ),
+    "cloud_base": ("r = r_s (1 - c) + {albedo} c",),
     "pressure_fao56": ("p = {sea_level_pa} (({sea_level_k} - {lapse_k_per_m} h) / {sea_level_k})^{power}",),
 }
 MEANING = {
@@ -53,6 +59,9 @@ MEANING = {
     "kasten_1966": "m relative air mass, z sun zenith angle [deg]",
     "angstrom": "aerosol optical depth at 380 nm, where only that at 500 nm is given",
     "pressure_fao56": "p air pressure [Pa], h height [m]",
+    "kasten_czeplak_1980": "c cloud fraction, r and r_s albedo of the sky with and without cloud, clear: over black "
+    "ground without cloud",
+    "cloud_base": "c cloud fraction, r and r_s albedo of the sky with and without cloud",
 }
 TITLES = {
     "snow_test": "snow test",
@@ -64,12 +73,17 @@ TITLES = {
     "kasten_1966": "relative air mass, Kasten (1966)",
     "angstrom": "aerosol at another wavelength",
     "pressure_fao56": "air pressure from height",
+    "kasten_czeplak_1980": "insolation under cloud, Kasten & Czeplak (1980)",
+    "cloud_base": "light that cloud throws back to the ground",
 }
 HEADINGS = {
     "sensors": "Sensors",
     "conversions": "Conversions of band reflectance to broadband albedo (albedo.conversion)",
     "snow": "Snow (albedo.snow_fraction)",
-    "clear_sky": "Clear sky (insolation.source)",
+    "clear_sky": "Clear sky and cloud (insolation.source, insolation.cloud)",
+    "longwave": "Longwave from the sky (longwave.method, longwave.cloud)",
+    "emissivity": "Emissivity of the ground (longwave.emissivity)",
+    "anisotropy": "Reflection that differs with direction (albedo.day, albedo.anisotropy)",
 }
 
 
@@ -89,7 +103,10 @@ def methods_data(name: str | None = None) -> dict[str, dict[str, Entry]]:
     ------
     InputProblem : nothing has that name; the nearest is offered.
     """
-    entries = {**_sensors(), **_conversions(), **_snow(), **_sky()}
+    entries = {**_sensors(), **_conversions(), **_snow()}
+    for section, table in _TABLES.items():
+        rows = load_table(table).rows.items()
+        entries |= {key if key not in entries else f"{section}_{key}": _model(key, row, section) for key, row in rows}
     if name is None:
         return {"methods": entries}
     wanted = _plain_word(name)
@@ -167,17 +184,18 @@ def _snow() -> dict[str, Entry]:
     return {key: {**one, "holds": rule} if one.get("kind") == "fraction" else one for key, one in entries.items()}
 
 
-def _sky() -> dict[str, Entry]:
-    return {key: _model(key, row, "clear_sky") for key, row in load_table("clearsky").rows.items()}
-
-
 def _model(key: str, row: Mapping[str, Any], section: str) -> Entry:
     """A row with its title and its formula written out; without words for it, no lines."""
     words = FORMULAS.get(key, FORMULAS.get(str(row.get("formula")), ()))
     numbers = {name: _printed(value) for name, value in row.items()}
     formula = [line.format(**numbers).replace("+ -", "- ") for line in words]
+    if not formula and "formula" in row:
+        formula = [_EXPONENT.sub(lambda found: format(Decimal(found[0]), "f"), row["formula"])]
+    if not formula and "emissivity" in row:
+        formula = [f"emissivity = {_printed(row['emissivity'])}"]
     extra = {"symbols": MEANING[key]} if key in MEANING else {}
-    return {**row, "section": section, "title": TITLES.get(key, key), "formula": formula, **extra}
+    title = TITLES.get(key, row.get("title", key.replace("_", " ")))
+    return {**row, "section": section, "title": title, "formula": formula, **extra}
 
 
 def _printed(value: Any) -> Any:
@@ -259,4 +277,8 @@ _SAYS: dict[str, Callable[[Entry, bool], Iterator[str]]] = {
     "conversions": _conversion_says,
     "snow": _model_says,
     "clear_sky": _model_says,
+    "longwave": _model_says,
+    "emissivity": _model_says,
+    "anisotropy": _model_says,
 }
+_TABLES = {"clear_sky": "clearsky", "longwave": "longwave", "emissivity": "emissivity", "anisotropy": "anisotropy"}

@@ -6,6 +6,7 @@ import datetime as dt
 import math
 from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
+from itertools import groupby
 
 from firnlight.core.dates import periods
 from firnlight.core.errors import SettingsProblem
@@ -14,6 +15,7 @@ from firnlight.core.totals import CM2_PER_KM2, Totals
 from firnlight.io.fingerprints import text_id
 from firnlight.io.regions import ALL
 from firnlight.io.sheets import DayTotals, read_totals
+from firnlight.physics.longwave import melt_potential_mm_day
 from firnlight.run.ground import StaticRow, other_strata, static_rows
 from firnlight.run.store import Store
 
@@ -23,17 +25,18 @@ UNITS = {
     "band_low_m": "m", "band_high_m": "m", "state": "", "area_km2": "km2", "seen_km2": "km2", "coverage": "1",
     "cloud_share": "1", "shadow_share": "1", "missing_share": "1", "scene_count": "1", "cell_count": "1", "albedo": "1",
     "albedo_area_mean": "1", "albedo_p10": "1", "albedo_p50": "1", "albedo_p90": "1", "albedo_u": "1",
-    "snow_fraction": "1", "insolation_wm2": "W m-2", "reflected_wm2": "W m-2", "absorbed_wm2": "W m-2",
-    "absorbed_u": "W m-2", "absorbed_u_independent": "W m-2", "absorbed_u_local": "W m-2", "absorbed_u_shared": "W m-2",
-    "absorbed_gj": "GJ", "limited_share": "1", "result": "",
+    "snow_fraction": "1", "insolation_wm2": "W m-2", "terrain_light_wm2": "W m-2", "reflected_wm2": "W m-2",
+    "absorbed_wm2": "W m-2", "absorbed_u": "W m-2", "absorbed_u_independent": "W m-2", "absorbed_u_local": "W m-2",
+    "absorbed_u_shared": "W m-2", "net_longwave_wm2": "W m-2", "net_radiation_wm2": "W m-2", "net_radiation_u": "W m-2",
+    "absorbed_gj": "GJ", "melt_potential_mm_day": "mm", "limited_share": "1", "result": "",
 }  # fmt: skip
 CAUTIONS = (
     "Radiative melt potential is not runoff: no cold content, rain on snow, turbulent heat, refreezing or routing.",
     "Not for flood warning or avalanche judgement by itself: use the warnings of the responsible national and local "
     "services, follow local codes, and have results that people's safety rests on reviewed by licensed practitioners.",
-    "Insolation is that of a cloudless sky: it overstates the energy of cloudy days.",
     "Maps may be days old: their dates are in the table.",
 )
+CLOUDLESS = "Insolation is that of a cloudless sky: it overstates the energy of cloudy days."
 _EMPTY = Totals()
 _Group = tuple[str, str, float | None, float | None]  # region, land cover, band
 
@@ -47,21 +50,35 @@ class Answer:
     until: dt.date
     as_of: dt.date
     area: str
+    cautions: tuple[str, ...] = CAUTIONS
 
     def about(self) -> dict[str, object]:
         return {
             "version": 1, "area": self.area, "since": self.since.isoformat(), "until": self.until.isoformat(),
             "as_of": self.as_of.isoformat(), "fluxes": "24-hour means of UTC days per unit of horizontal area",
-            "cautions": list(CAUTIONS),
+            "cautions": list(self.cautions),
         }  # fmt: skip
 
 
 @dataclass
 class _Ground:
-    """Totals of one group in one period, by state, and what they came from."""
+    """Totals of one group in one period, by state and of all states ("all"), and what they came from."""
 
     states: dict[str, Totals] = field(default_factory=dict)
     scenes: set[str] = field(default_factory=set)
+    today: dict[str, Totals] = field(default_factory=dict)
+
+    def add(self, state: str, totals: Totals) -> None:
+        """Add ground of the day that is being gathered."""
+        for name in (state, "all"):
+            self.today[name] = self.today[name] + totals if name in self.today else totals
+
+    def end_day(self) -> None:
+        """All ground of a day is there: only now are the day's local errors known."""
+        for name, totals in self.today.items():
+            ended = totals.end_of_day()
+            self.states[name] = self.states[name] + ended if name in self.states else ended
+        self.today = {}
 
 
 def key_names(by: str) -> tuple[str, ...]:
@@ -106,7 +123,13 @@ def regional_budget(
     for first, last in periods(since, until, every, starts):
         part = [one for one in inside if first <= one.day <= last]
         rows += _period_rows(workflow, first, last, part, ground, by, as_of)
-    return Answer(rows, since, until, as_of, workflow.area.name)
+    return Answer(rows, since, until, as_of, workflow.area.name, cautions(workflow))
+
+
+def cautions(workflow: Workflow) -> tuple[str, ...]:
+    """What a reader of this workflow's numbers must be told."""
+    cloudless = workflow.insolation.source == "clear-sky" and workflow.insolation.cloud is None
+    return (*CAUTIONS, CLOUDLESS) if cloudless else CAUTIONS
 
 
 def _strata_keys(store: Store, days: Iterable[DayTotals]) -> dict[str, str]:
@@ -148,16 +171,19 @@ def _period_rows(
         area[key] = area.get(key, 0) + place.area_cm2
     found: dict[_Group, _Ground] = {key: _Ground() for key in area}
     keys = set()
-    for day in days:
-        keys.add(day.key)
-        for row in day.rows:
-            if not wanted(row.region):
-                continue
-            key = group(row.region, row.land_cover, row.band_low_m, row.band_high_m)
-            here = found.setdefault(key, _Ground())
-            here.states[row.snow] = here.states.get(row.snow, _EMPTY) + row.totals
-            if row.snow != "unseen":
-                here.scenes.update(day.scenes)
+    for _, of_date in groupby(sorted(days, key=lambda one: (one.day, one.tile)), key=lambda one: one.day):
+        for day in of_date:
+            keys.add(day.key)
+            for row in day.rows:
+                if not wanted(row.region):
+                    continue
+                key = group(row.region, row.land_cover, row.band_low_m, row.band_high_m)
+                here = found.setdefault(key, _Ground())
+                here.add(row.snow, row.totals)
+                if row.snow != "unseen":
+                    here.scenes.update(day.scenes)
+        for here in found.values():
+            here.end_day()
     result = text_id(" ".join(sorted(keys)))[:16]
     state = "final" if (as_of - last).days >= workflow.store.final_after_days else "provisional"
     rows = []
@@ -186,9 +212,7 @@ def _order(key: _Group) -> tuple[str, str, float, float]:
 def _group_rows(
     ground: _Ground, area: int, days: int, by_snow: bool, least_coverage: float
 ) -> list[tuple[str, Mapping[str, object]]]:
-    whole = _EMPTY
-    for one in ground.states.values():
-        whole = whole + one
+    whole = ground.states.get("all", _EMPTY)
     all_days = max(area * days, whole.area + whole.unseen_area)
     never = all_days - whole.area - whole.unseen_area  # days without a scene, ground outside every tile
     other = never + whole.unseen_area - whole.cloud - whole.shadow
@@ -218,7 +242,10 @@ def _group_rows(
         one = ground.states.get(state, _EMPTY)
         if one.area:
             km2 = one.area / days / CM2_PER_KM2
-            rows.append((state, {**shares, **_numbers(one, enough), "area_km2": km2, "seen_km2": km2}))
+            numbers = _numbers(one, enough)
+            if state == "snow" and enough:
+                numbers["melt_potential_mm_day"] = float(melt_potential_mm_day(one.melt_wm2))
+            rows.append((state, {**shares, **numbers, "area_km2": km2, "seen_km2": km2}))
     unseen = all_days - whole.area
     if unseen:
         rows.append(
@@ -243,7 +270,10 @@ def _numbers(one: Totals, enough: bool) -> dict[str, object]:
         "snow_fraction": one.snow_fraction_mean, "insolation_wm2": one.insolation_wm2, "reflected_wm2": one.reflected_wm2,
         "absorbed_wm2": one.absorbed_wm2, "absorbed_u": one.absorbed_u, "absorbed_u_independent": one.absorbed_u_independent,
         "absorbed_u_local": one.absorbed_u_local, "absorbed_u_shared": one.absorbed_u_shared,
+        "terrain_light_wm2": one.terrain_light_wm2, "net_longwave_wm2": one.net_longwave_wm2,
+        "net_radiation_wm2": one.net_radiation_wm2, "net_radiation_u": one.net_radiation_u,
     }  # fmt: skip
+    means["melt_potential_mm_day"] = math.nan
     numbers: dict[str, object] = {name: value if enough else math.nan for name, value in means.items()}
     numbers["cell_count"] = one.cells
     numbers["absorbed_gj"] = one.absorbed_gj if one.area else math.nan

@@ -16,7 +16,7 @@ from firnlight.run.ledger import Ledger
 from firnlight.run.plan import Planner, Span
 from firnlight.run.progress import Listener, Step
 from firnlight.run.store import Store
-from firnlight.run.tile import BLOCK_COLS, BLOCK_ROWS
+from firnlight.run.tile_sources import BLOCK_COLS, BLOCK_ROWS
 
 
 @dataclass(frozen=True)

@@ -14,6 +14,7 @@ from firnlight.core.grid import Grid
 from firnlight.core.settings import Workflow
 from firnlight.io import ground as places
 from firnlight.io.atomic import write_text
+from firnlight.io.elevation import reaches, square_cell_m
 from firnlight.io.fingerprints import text_id
 from firnlight.io.ownership import neighbours
 from firnlight.io.rasters import grid_of
@@ -21,7 +22,9 @@ from firnlight.io.regions import Regions, read_regions, whole_area
 from firnlight.io.sheets import stratum_regions
 from firnlight.io.strata import build_strata, outside_area_cm2, read_strata_table
 from firnlight.run.contents import Contents
+from firnlight.run.relief import REACH_M, RELIEF_VERSION, build_relief, is_made, margin_cells
 from firnlight.run.store import Store
+from firnlight.stages.insolation import DIRECTIONS
 
 STRATA_VERSION = 2
 
@@ -34,6 +37,10 @@ class TileGround:
     elevation: str | None
     elevation_id: str
     key: str  # of the strata: region, cover, band and ownership of every cell
+    land_cover: str | None = None
+    land_cover_id: str = ""
+    relief_key: str = ""  # of slope, aspect, horizon and sky view; "" where they are not asked for
+    around: tuple[str, ...] = ()  # elevation files that may cover the ground beside the tile, the best last
 
 
 class Ground:
@@ -80,10 +87,28 @@ class Ground:
                 sorted(self.workflow.surface.class_names.items()),
                 [[name, _place(self.grids[name])] for name in self.grids if name in near], tile,
             ]  # fmt: skip
+            cover_id = self.contents.of(land_cover) if land_cover else ""
+            around, relief_key = self._relief(tile, elevation_id) if self.workflow.needs_relief else ((), "")
             self._tiles[tile] = TileGround(
-                places.centre_lonlat(grid), str(elevation) if elevation else None, elevation_id, text_id(json.dumps(facts))
+                places.centre_lonlat(grid), str(elevation) if elevation else None, elevation_id, text_id(json.dumps(facts)),
+                str(land_cover) if land_cover else None, cover_id, relief_key, around,
             )  # fmt: skip
         return self._tiles[tile]
+
+    def _relief(self, tile: str, elevation_id: str) -> tuple[tuple[str, ...], str]:
+        """Elevation files around a tile, and the key of its relief."""
+        grid, around = self.grids[tile], []
+        surface = self.workflow.surface
+        margin_m = margin_cells(square_cell_m(grid, str(surface.elevation))) * grid.dx
+        if surface.wider_elevation is not None:
+            wider = self._path(surface.wider_elevation, tile, "surface.wider_elevation")
+            around.append(str(wider))
+        for name, other in sorted(self.grids.items()):
+            path = self.workflow.tile_path(str(surface.elevation), name)
+            if name != tile and path.is_file() and reaches(other, grid, margin_m):
+                around.append(str(path))
+        facts = [RELIEF_VERSION, DIRECTIONS, REACH_M, _place(grid), elevation_id, [self.contents.of(p) for p in around]]
+        return tuple(around), text_id(json.dumps(facts))
 
     def files(self, tile: str) -> list[str]:
         """Elevation and land cover of a tile that are there."""
@@ -142,6 +167,13 @@ class Ground:
             surface.class_names, self.workflow.regions.elevation_bands, path, ground.key,
         )  # fmt: skip
         self.warnings += [f"{tile}: {warning}" for warning in table.warnings]
+
+    def prepare_relief(self, tile: str, workers: int) -> None:
+        """Work out slope, horizon and sky view of a tile where they are asked for and not in the store."""
+        ground, folder = self.of(tile), self.store.relief(tile)
+        if ground.relief_key and not is_made(folder, ground.relief_key):
+            assert ground.elevation is not None
+            build_relief(self.grids[tile], ground.elevation, ground.around, folder, ground.relief_key, workers)
 
     def note_outside(self) -> None:
         """Write down each region's ground outside every tile, unless the same is written already."""

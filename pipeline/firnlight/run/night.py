@@ -23,7 +23,8 @@ from firnlight.run.ledger import Ledger, Product, Refusal
 from firnlight.run.plan import Decision, Planner, Span
 from firnlight.run.progress import Listener, Step, silent
 from firnlight.run.store import ITEM, Store
-from firnlight.run.tile import Made, TileJob, job_call
+from firnlight.run.tile import Made, job_call
+from firnlight.run.tile_sources import TileJob
 
 FINISHED_BYTES_PER_CELL = 8  # 4.8 measured on a demo tile
 BYTES_PER_CELL = 2 * 22  # scratch and finished maps, uncompressed: what a tile-day may need at worst
@@ -141,7 +142,7 @@ def _run(
         _ = planner.ground.regions  # polygons that cannot be used stop the night before anything is written
         store.need_room(_room_needed(jobs.values()))
     _prepare_ground(planner, jobs)
-    outcome.warnings = planner.ground.warnings
+    outcome.warnings = [*planner.ground.warnings, *planner.gaps]
     if not jobs:
         ledger.record_refusals(planner.refusals, started, due)
         outcome.refusals = planner.refusals
@@ -199,6 +200,8 @@ def _prepare_ground(planner: Planner, jobs: dict[str, TileJob]) -> None:
     for tile in sorted(tiles & set(planner.ground.grids)):
         try:
             planner.ground.prepare(tile)
+            if any(job.tile == tile for job in jobs.values()):
+                planner.ground.prepare_relief(tile, planner.workers)
         except SettingsProblem:
             raise
         except InputProblem as problem:

@@ -11,7 +11,7 @@ from pathlib import Path
 
 from firnlight.core.errors import InputProblem, SettingsProblem
 from firnlight.core.grid import Grid
-from firnlight.core.layers import layer_names
+from firnlight.core.layers import day_layers
 from firnlight.core.settings import Workflow
 from firnlight.io.fingerprints import content_id, text_id
 from firnlight.io.scenes import Scene, find_scenes, open_scene
@@ -20,12 +20,12 @@ from firnlight.run.contents import Contents
 from firnlight.run.ground import Ground
 from firnlight.run.ledger import Ledger, Product, Refusal
 from firnlight.run.store import BUDGET, ITEM, Store
-from firnlight.run.tile import TileJob
+from firnlight.run.tile_sources import TileJob, lattice_positions
+from firnlight.run.weather import Weather, day_weather
 from firnlight.stages import chain
-from firnlight.stages.albedo import AlbedoNumbers, albedo_numbers
+from firnlight.stages.albedo import AlbedoNumbers, albedo_numbers, carried_share
 from firnlight.stages.insolation import insolation_facts
-
-PRODUCTS = (*layer_names(), BUDGET, ITEM)
+from firnlight.stages.longwave import emissivities, longwave_facts
 
 
 @dataclass(frozen=True)
@@ -74,6 +74,8 @@ class Planner:
         self.workflow, self.store, self.workers = workflow, store, workers
         self.products = ledger.products()
         self.contents = Contents(ledger)
+        self.names = (*day_layers(*workflow.wanted), BUDGET, ITEM)
+        self.gaps: list[str] = []  # what the weather files lack
         self.refusals: list[Refusal] = []
         self._numbers: dict[str, AlbedoNumbers] = {}
         self.scenes = self._find()
@@ -237,20 +239,21 @@ class Planner:
         ground = self.ground.of(tile)
         scenes = self._preferred(tile, day, contents)
         numbers = tuple(self.numbers(scene.sensor) for scene in scenes)
-        keys = self._keys(tile, ground.key, [contents[scene.id] for scene in scenes], numbers)
+        weather = day_weather(self.workflow, day, *lattice_positions(self.ground.grids[tile]))
+        keys = self._keys(tile, ground.key, [contents[scene.id] for scene in scenes], numbers, weather)
         stale, reasons, touched = self._stale(tile, day, keys)
         if not stale:
             return Decision(tile, day, "done", "nothing has changed", touched=tuple(touched))
+        self.gaps += [f"{tile} {day}: {gap}" for gap in weather.gaps]
         kept = tuple(
-            self.products[tile, day, name] for name in PRODUCTS if name not in stale and (tile, day, name) in self.products
+            self.products[tile, day, name] for name in self.names if name not in stale and (tile, day, name) in self.products
         )
         paths = {path for scene in scenes for path, _ in self._files(scene)}
-        if ground.elevation:
-            paths.add(ground.elevation)
+        paths |= {path for path in (ground.elevation, ground.land_cover) if path}
         stats = {path: os.stat(path) for path in sorted(paths)}
         job = TileJob(
             store=self.store, tile=tile, day=day, grid=self.ground.grids[tile], scenes=scenes, numbers=numbers,
-            elevation=ground.elevation, insolation=self.workflow.insolation, keys=keys, stale=tuple(stale), kept=kept,
+            ground=ground, workflow=self.workflow, weather_key=weather.key, keys=keys, stale=tuple(stale), kept=kept,
             inputs=tuple((path, s.st_size, s.st_mtime_ns) for path, s in stats.items()),
         )  # fmt: skip
         return Decision(tile, day, "make", "; ".join(reasons), job, tuple(touched))
@@ -266,25 +269,40 @@ class Planner:
 
         return tuple(sorted((s for s in self.scenes[tile, day] if s.id in contents), key=order))
 
-    def _keys(self, tile: str, strata_key: str, contents: list[str], numbers: tuple[AlbedoNumbers, ...]) -> dict[str, str]:
-        grid = self.ground.grids[tile]
+    def _keys(
+        self, tile: str, strata_key: str, contents: list[str], numbers: tuple[AlbedoNumbers, ...], weather: Weather
+    ) -> dict[str, str]:
+        workflow, grid, ground = self.workflow, self.ground.grids[tile], self.ground.of(tile)
+        classes, longwave = workflow.surface.class_names, workflow.longwave
         facts: dict[str, object] = {name: [one.facts()[name] for one in numbers] for name in numbers[0].facts()}
-        facts["insolation"] = insolation_facts(self.workflow.insolation)
-        facts["sky_error"] = self.workflow.insolation.relative_uncertainty
+        # an albedo of the day goes with its light
+        of_the_day = workflow.albedo.day == "sun path"
+        facts["carried"] = [insolation_facts(workflow.insolation), weather.key, carried_share()] if of_the_day else []
+        level = workflow.albedo.illumination != "none"
+        facts["level"] = [workflow.albedo.illumination, workflow.albedo.illumination_over_snow, ground.relief_key,
+                          ground.land_cover_id] if level else []  # fmt: skip
+        facts["insolation"] = insolation_facts(workflow.insolation)
+        facts["sky_error"] = [workflow.insolation.relative_uncertainty, workflow.insolation.local_uncertainty]
+        facts["longwave"] = longwave_facts(longwave, classes)
+        facts["longwave_error"] = [longwave.uncertainty_wm2, longwave.local_uncertainty_wm2] if longwave else []
+        facts["correlation"] = workflow.uncertainty.correlation_length_m
         place = [grid.crs, list(grid.transform), list(grid.shape)]
+        by_cover = longwave is not None and bool(emissivities(longwave, classes)[1])
         inputs: dict[str, object] = {
             "reflectance": contents, "sun": place, "ground": place, "strata": strata_key,
-            "elevation": self.ground.of(tile).elevation_id,
+            "elevation": ground.elevation_id, "weather": weather.key,
+            "terrain": ground.relief_key if workflow.insolation.terrain else "",
+            "covers": ground.land_cover_id if by_cover else "",
         }  # fmt: skip
         keys = chain.product_keys(inputs, facts, digest)
-        keys[ITEM] = digest([[name, keys[name]] for name in sorted(keys)])
+        keys[ITEM] = digest([[name, keys[name]] for name in self.names if name != ITEM])
         return keys
 
     def _stale(self, tile: str, day: dt.date, keys: dict[str, str]) -> tuple[list[str], list[str], list[Product]]:
         stale: list[str] = []
         reasons: dict[str, list[str]] = {}
         touched: list[Product] = []
-        for name in PRODUCTS:
+        for name in self.names:
             known = self.products.get((tile, day, name))
             reason, seen = self._state(known, keys[name], self.store.product(tile, day, name))
             if reason:
@@ -292,7 +310,7 @@ class Planner:
                 reasons.setdefault(reason, []).append(name)
             elif seen is not None:
                 touched.append(seen)
-        if len(stale) == len(PRODUCTS) and set(reasons) == {"new"}:
+        if len(stale) == len(self.names) and set(reasons) == {"new"}:
             return stale, ["new"], touched
         return stale, [f"{reason}: {', '.join(names)}" for reason, names in reasons.items()], touched
 

@@ -31,6 +31,10 @@ class Store:
     def strata(self, tile: str) -> Path:
         return self.root / "terrain" / tile / "strata.tif"
 
+    def relief(self, tile: str) -> Path:
+        """Folder of a tile's slope, aspect, sky view and horizon."""
+        return self.root / "terrain" / tile
+
     def maps(self, tile: str, day: dt.date) -> Path:
         return self.root / "maps" / tile / day.isoformat()
 

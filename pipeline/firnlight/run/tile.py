@@ -2,70 +2,46 @@
 
 from __future__ import annotations
 
-import datetime as dt
 import os
 import threading
 import time
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass, replace
 from functools import partial
 from typing import Any
 
 import numpy as np
 
+from firnlight.core.correlation import block_cells
 from firnlight.core.errors import InputProblem
-from firnlight.core.grid import Grid, Window
+from firnlight.core.grid import Window
 from firnlight.core.lattice import Lattice
-from firnlight.core.layers import flag_bit, layer, layer_names
-from firnlight.core.settings import Insolation
+from firnlight.core.layers import flag_bit, layer
+from firnlight.core.totals import CM2_PER_M2, BlockGrid
 from firnlight.io import sheets
-from firnlight.io.bands import SceneReader
-from firnlight.io.cog import CogWriter, Written, read_block
+from firnlight.io.cog import CogWriter, Written
 from firnlight.io.fingerprints import content_id
-from firnlight.io.ground import areas, cell_areas_cm2, cell_size_m, positions
+from firnlight.io.ground import areas, cell_areas_cm2, cell_size_m
 from firnlight.io.items import Asset, product_item
-from firnlight.io.rasters import open_raster, read_window
 from firnlight.io.scene_files import forget_trail
 from firnlight.io.scenes import Scene
 from firnlight.io.strata import read_strata_table
 from firnlight.run.engine import run_blocks
 from firnlight.run.ledger import Product
-from firnlight.run.store import BUDGET, ITEM, Store
+from firnlight.run.levelling import LevelledScene
+from firnlight.run.store import BUDGET, ITEM
+from firnlight.run.tile_sources import (
+    FROM_SCENES,
+    Sources,
+    TileJob,
+    any_seen,
+    day_light,
+    lattice_positions,
+    surroundings,
+)
 from firnlight.stages import chain
-from firnlight.stages.albedo import AlbedoNumbers
-from firnlight.stages.insolation import lattice_step, sky_lattice
-from firnlight.stages.summarise import Summary
-
-BLOCK_ROWS, BLOCK_COLS = 512, 2048  # whole tiles of the usual inputs and of our own maps
-
-
-@dataclass(frozen=True)
-class TileJob:
-    """All that a worker must know of one tile-day; plain data, so it travels.
-
-    Attributes
-    ----------
-    scenes : opened scenes, the preferred one first, and the albedo numbers of each.
-    keys : key of every product; `stale` are those to be made.
-    inputs : (path, size, mtime_ns) of every input when the plan was made.
-    """
-
-    store: Store
-    tile: str
-    day: dt.date
-    grid: Grid
-    scenes: tuple[Scene, ...]
-    numbers: tuple[AlbedoNumbers, ...]
-    elevation: str | None
-    insolation: Insolation
-    keys: dict[str, str]
-    stale: tuple[str, ...]
-    kept: tuple[Product, ...]
-    inputs: tuple[tuple[str, int, int], ...]
-    block: tuple[int, int] = (BLOCK_ROWS, BLOCK_COLS)
-
-    def with_block(self, block: tuple[int, int]) -> TileJob:
-        """The same job cut into other blocks."""
-        return replace(self, block=block)
+from firnlight.stages.insolation import CellMeans, SkyLattice
+from firnlight.stages.summarise import Errors, Summary
 
 
 @dataclass(frozen=True)
@@ -76,21 +52,6 @@ class Made:
     scene: str = ""
     problem: InputProblem | None = None
     seconds: float = 0.0
-
-
-class _Sources(threading.local):
-    """Handles of one thread: GDAL datasets must not be shared."""
-
-    def __init__(self, job: TileJob) -> None:
-        self.readers = [SceneReader(s, n.bands) for s, n in zip(job.scenes, job.numbers, strict=True)]
-        self.elevation = open_raster(job.elevation) if job.elevation else None
-        self.strata = open_raster(str(job.store.strata(job.tile)))
-        self.maps: dict[str, Any] = {}
-
-    def map(self, job: TileJob, name: str) -> Any:
-        if name not in self.maps:
-            self.maps[name] = open_raster(str(job.store.product(job.tile, job.day, name)))
-        return self.maps[name]
 
 
 class _SceneProblem(Exception):
@@ -120,20 +81,9 @@ def run_tile_day(job: TileJob, threads: int) -> Made:
 
 
 def _make(job: TileJob, threads: int) -> list[Product]:
-    maps = [name for name in layer_names() if name in job.stale]
-    from_maps = not maps
-    relative_u = job.insolation.relative_uncertainty
+    maps = [name for name in job.layers if name in job.stale]
     table = read_strata_table(job.store.strata(job.tile))
-    summary = Summary(len(table.strata), relative_u, chain.FLAG_BITS) if BUDGET in job.stale else None
-    sources = _Sources(job)
-    times = tuple(scene.datetime.timestamp() for scene in job.scenes)
-    sky = None if from_maps else sky_lattice(job.day, times, *_positions(job.grid), job.insolation)
-    area = areas(job.grid)
-    scales = [
-        (np.array([s.bands[b].scale for b in n.bands]), np.array([s.bands[b].offset for b in n.bands]))
-        for s, n in zip(job.scenes, job.numbers, strict=True)
-    ]
-    with_data = [threading.Event() for _ in job.scenes]
+    summary = Summary(len(table.strata), _errors(job), chain.FLAG_BITS) if BUDGET in job.stale else None
     writers = {
         name: CogWriter(
             job.store.product(job.tile, job.day, name), layer(name), job.grid,
@@ -141,48 +91,8 @@ def _make(job: TileJob, threads: int) -> list[Product]:
         )
         for name in maps
     }  # fmt: skip
-
-    def from_scenes(window: Window) -> chain.Blocks:
-        assert sky is not None
-        parts = []
-        for n, (scene, numbers) in enumerate(zip(job.scenes, job.numbers, strict=True)):
-            try:
-                part = chain.scene_block(sources.readers[n], window, numbers, *scales[n], sky.zenith_deg[n], sky)
-            except InputProblem as problem:
-                raise _SceneProblem(scene.id, problem) from problem
-            if not with_data[n].is_set() and (part["quality"] & flag_bit("missing") == 0).any():
-                with_data[n].set()
-            parts.append(part)
-        blocks = chain.merge(parts)
-        if sources.elevation is None:
-            elevation = np.zeros((window.rows, window.cols), np.float32)
-        else:
-            elevation = _elevation(sources.elevation, window)
-        chain.flux_layers(blocks, elevation, window, sky, relative_u)
-        return blocks
-
-    def from_stored(window: Window) -> chain.Blocks:
-        stored = {}
-        for name in layer_names():
-            bands = read_block(sources.map(job, name), window)
-            stored[name] = bands if len(layer(name).parts) > 1 else bands[0]
-        return stored
-
-    def work(window: Window) -> None:
-        blocks = from_stored(window) if from_maps else from_scenes(window)
-        for name, writer in writers.items():
-            writer.write(window, blocks[name])
-        if summary is not None:
-            strata = read_window(sources.strata, window)
-            summary.add(strata, cell_areas_cm2(area, window), blocks)
-
     try:
-        finishers: dict[str, Any] = {name: writer.finish for name, writer in writers.items()}
-        written = run_blocks(work, job.grid.windows(*job.block), finishers or {"": lambda: None}, threads)
-        if not from_maps:
-            for scene, seen in zip(job.scenes, with_data, strict=True):
-                if not seen.is_set():
-                    raise _SceneProblem(scene.id, _all_nodata(scene))
+        written = _run(job, writers, summary, threads)
         _unchanged(job)
         return _publish(job, table, summary, writers, written)
     finally:
@@ -190,15 +100,128 @@ def _make(job: TileJob, threads: int) -> list[Product]:
             writer.discard()
 
 
-def _positions(grid: Grid) -> tuple[Lattice, Lattice]:
-    return positions(grid, lattice_step(cell_size_m(grid)))
+def _errors(job: TileJob) -> Errors:
+    settings, longwave = job.workflow.insolation, job.workflow.longwave
+    cell_m, length_m = cell_size_m(job.grid), job.workflow.uncertainty.correlation_length_m
+    side = block_cells(length_m, cell_m)
+    return Errors(
+        (settings.relative_uncertainty, settings.local_uncertainty),
+        (longwave.uncertainty_wm2, longwave.local_uncertainty_wm2) if longwave else (0.0, 0.0),
+        " and ".join(sorted({numbers.sensor for numbers in job.numbers})),
+        BlockGrid(job.tile, side * cell_m, length_m),
+        side,
+    )
 
 
-def _elevation(dataset: Any, window: Window) -> Any:
-    values = read_window(dataset, window).astype(np.float32)
-    if dataset.nodata is not None:
-        values[values == np.float32(dataset.nodata)] = np.nan
-    return values
+def _run(job: TileJob, writers: dict[str, CogWriter], summary: Summary | None, threads: int) -> dict[str, Written]:
+    """Fill the writers and the totals: from the scenes, or from maps that are kept.
+
+    On slopes the albedo of the surroundings lights a cell, so albedo comes first, for the whole tile, and the fluxes in
+    a second pass over it; on flat ground one pass makes all.
+    """
+    sources = Sources(job, {name: writers[name] for name in FROM_SCENES if name in writers})
+    light = day_light(job) if writers else None
+    area = areas(job.grid)
+    anew = any(name in writers for name in FROM_SCENES)
+    scenes = _SceneBlocks(job, sources, light.sky, threads) if anew and light is not None else None
+    two_passes = light is not None and job.on_slopes
+
+    def write(window: Window, blocks: chain.Blocks, names: Iterable[str]) -> None:
+        for name in names:
+            if name in writers:
+                writers[name].write(window, blocks[name])
+
+    if two_passes and light is not None:
+        around = surroundings(job)
+
+        def first(window: Window) -> None:
+            blocks = scenes.read(window) if scenes is not None else sources.stored(window, ("albedo",))
+            around.add(blocks["albedo"], window)
+            if scenes is not None:
+                write(window, blocks, FROM_SCENES)
+
+        ends = {name: writers[name].complete for name in FROM_SCENES if name in writers}
+        run_blocks(first, job.grid.windows(*job.block), ends or {"": lambda: None}, threads)
+        light = replace(light, around=around.mean(), step=around.step)
+        if light.cells is not None:
+            light = replace(light, factors=_cell_factors(job, sources, light, area, threads))
+
+    def work(window: Window) -> None:
+        if light is None:
+            blocks = sources.stored(window, job.layers)
+        else:
+            fresh = scenes is not None and not two_passes
+            blocks = scenes.read(window) if fresh and scenes is not None else sources.stored(window, FROM_SCENES)
+            relief = sources.relief(window, light.sky.directions, any_seen(blocks)) if two_passes else None
+            chain.flux_layers(
+                blocks, sources.elevation(window), relief, sources.cover(window) if light.places else None, window, light
+            )
+            write(window, blocks, [name for name in writers if not (two_passes and name in FROM_SCENES)])
+        if summary is not None:
+            summary.add(sources.strata(window), cell_areas_cm2(area, window), blocks, window)
+
+    finishers: dict[str, Any] = {name: writer.finish for name, writer in writers.items()}
+    written = run_blocks(work, job.grid.windows(*job.block), finishers or {"": lambda: None}, threads)
+    if scenes is not None:
+        scenes.check()
+    return written
+
+
+def _cell_factors(job: TileJob, sources: Sources, light: chain.Light, area: Lattice, threads: int) -> Any:
+    """What keeps the means of a supplied grid's cells when their light is spread over slopes."""
+    assert light.cells is not None
+    means = CellMeans(light.cells)
+
+    def gather(window: Window) -> None:
+        relief = sources.relief(window, light.sky.directions)
+        whole = chain.light_of_all_ground(sources.elevation(window), relief, window, light)
+        means.add(whole, cell_areas_cm2(area, window) // CM2_PER_M2, window)
+
+    run_blocks(gather, job.grid.windows(*job.block), {"": lambda: None}, threads)
+    return means.factors()
+
+
+class _SceneBlocks:
+    """Albedo and what belongs to it, from the scenes of the day."""
+
+    def __init__(self, job: TileJob, sources: Sources, sky: SkyLattice, threads: int) -> None:
+        self._job, self._sources, self._sky = job, sources, sky
+        self._scales = [
+            (np.array([s.bands[b].scale for b in n.bands]), np.array([s.bands[b].offset for b in n.bands]))
+            for s, n in zip(job.scenes, job.numbers, strict=True)
+        ]
+        self._with_data = [threading.Event() for _ in job.scenes]
+        self._level: list[LevelledScene] = []
+        if job.workflow.albedo.illumination != "none":
+            self._level = [LevelledScene(job, sources, n, scale) for n, scale in enumerate(self._scales)]
+            for n, level in enumerate(self._level):
+                self._of(n, level.fit, threads)
+
+    def _of(self, number: int, work: Callable[..., Any], *arguments: Any) -> Any:
+        """Call `work`; what is wrong with its input is the scene's fault."""
+        try:
+            return work(*arguments)
+        except InputProblem as problem:
+            raise _SceneProblem(self._job.scenes[number].id, problem) from problem
+
+    def read(self, window: Window) -> chain.Blocks:
+        """The layers of FROM_SCENES in a window, one value per cell."""
+        parts = []
+        for n, numbers in enumerate(self._job.numbers):
+            reader: chain.BlockReader = self._level[n] if self._level else self._sources.readers[n]
+            ones, zeros = np.ones(len(numbers.bands)), np.zeros(len(numbers.bands))
+            scale = (ones, zeros) if self._level else self._scales[n]  # a levelled scene is reflectance already
+            part = self._of(n, chain.scene_block, reader, window, numbers, *scale, self._sky, n)
+            if not self._with_data[n].is_set() and (part["quality"] & flag_bit("missing") == 0).any():
+                self._with_data[n].set()
+            parts.append(part)
+        return chain.merge(parts)
+
+    def check(self) -> None:
+        """Refuse a scene that holds nothing."""
+        for scene, seen in zip(self._job.scenes, self._with_data, strict=True):
+            if not seen.is_set():
+                raise _SceneProblem(scene.id, _all_nodata(scene))
 
 
 def _all_nodata(scene: Scene) -> InputProblem:
@@ -256,18 +279,19 @@ def write_item(job: TileJob, products: list[Product]) -> None:
     known = {one.name: one for one in (*job.kept, *products)}
     assets = [
         Asset(name, job.store.root / known[name].path, known[name].key, known[name].size, known[name].digest)
-        for name in (*layer_names(), BUDGET)
+        for name in (*job.layers, BUDGET)
         if name in known
     ]
     rows, cols = job.grid.shape
     corners = [(rows - 1, 0), (rows - 1, cols - 1), (0, cols - 1), (0, 0)]
     outline = []
     for r, c in corners:
-        lon, lat = (float(lattice.at(Window(r, c, 1, 1))[0, 0]) for lattice in _positions(job.grid))
+        lon, lat = (float(lattice.at(Window(r, c, 1, 1))[0, 0]) for lattice in lattice_positions(job.grid))
         outline.append((round(lon, 6), round(lat, 6)))
     product_item(
         job.store.product(job.tile, job.day, ITEM), job.tile, job.day, job.grid, outline, job.keys[ITEM], assets,
-        {scene.id: scene.item_path for scene in job.scenes}, {stage.name: stage.version for stage in chain.STAGES},
+        {scene.id: scene.item_path for scene in job.scenes},
+        {stage.name: stage.version for stage in chain.STAGES if set(stage.makes) & {*job.layers, BUDGET}},
     )  # fmt: skip
 
 

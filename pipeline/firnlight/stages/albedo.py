@@ -16,9 +16,13 @@ from firnlight.physics.broadband import Conversion, conversion
 from firnlight.physics.snow import fraction_numbers, snow_limits
 from firnlight.stages.stage import Stage
 
-ALBEDO = Stage("albedo", 2, ("reflectance", "sun"), ("albedo", "quality"), ("conversion", "snow_test", "limits"))
-ALBEDO_U = Stage("albedo uncertainty", 1, ("reflectance", "albedo"), ("albedo_u",), ("conversion", "errors"))
-SNOW = Stage("snow fraction", 1, ("reflectance", "albedo"), ("snow_fraction",), ("snow_test", "snow_fraction"))
+ALBEDO = Stage(
+    "albedo", 2, ("reflectance", "sun"), ("albedo", "quality"), ("conversion", "snow_test", "limits", "carried", "level")
+)
+ALBEDO_U = Stage(
+    "albedo uncertainty", 1, ("reflectance", "albedo"), ("albedo_u",), ("conversion", "errors", "carried", "level")
+)
+SNOW = Stage("snow fraction", 1, ("reflectance", "albedo"), ("snow_fraction",), ("snow_test", "snow_fraction", "level"))
 
 SNOW_BANDS = ("green", "nir", "swir16")
 
@@ -139,6 +143,11 @@ def stored_fill(name: str = "albedo") -> int:
     fill = layer(name).nodata
     assert fill is not None
     return fill
+
+
+def carried_share() -> float:
+    """Share of a change of albedo with the sun's angle that is its standard uncertainty. [1]"""
+    return float(load_table("anisotropy").row("carried_albedo")["relative_u"])
 
 
 def empty_layers(shape: tuple[int, int]) -> dict[str, NDArray[Any]]:

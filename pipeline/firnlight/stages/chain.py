@@ -2,22 +2,36 @@
 
 from __future__ import annotations
 
+import threading
 from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
 from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from firnlight.core.grid import Window
+from firnlight.core.lattice import Lattice
 from firnlight.core.layers import flag_bit, layer, layer_names
-from firnlight.physics.chain_fast import albedo_block, flux_block
-from firnlight.stages.albedo import ALBEDO, ALBEDO_U, SNOW, AlbedoNumbers, empty_layers, stored_fill
-from firnlight.stages.insolation import INSOLATION, SkyLattice
+from firnlight.physics.chain_fast import absorbed_block, albedo_block, carry_block
+from firnlight.stages.albedo import ALBEDO, ALBEDO_U, SNOW, AlbedoNumbers, carried_share, empty_layers, stored_fill
+from firnlight.stages.insolation import (
+    INSOLATION,
+    Relief,
+    SkyLattice,
+    SourceCells,
+    flat_insolation,
+    rescaled,
+    slope_insolation,
+)
+from firnlight.stages.longwave import LONGWAVE, NET, NET_U, cover_places, net_layers
 from firnlight.stages.radiation import RADIATION, RADIATION_U
 from firnlight.stages.stage import Stage
 from firnlight.stages.summarise import SUMMARISE
 
-STAGES: tuple[Stage, ...] = (ALBEDO, ALBEDO_U, SNOW, INSOLATION, RADIATION, RADIATION_U, SUMMARISE)
+STAGES: tuple[Stage, ...] = (
+    ALBEDO, ALBEDO_U, SNOW, INSOLATION, RADIATION, RADIATION_U, LONGWAVE, NET, NET_U, SUMMARISE,
+)  # fmt: skip
 Blocks = dict[str, NDArray[Any]]
 FLAG_BITS = tuple(flag_bit(name) for name in layer("quality").flags)
 
@@ -59,16 +73,21 @@ class BlockReader(Protocol):
 
 def scene_block(
     reader: BlockReader, window: Window, numbers: AlbedoNumbers, scale: NDArray[np.float64], offset: NDArray[np.float64],
-    zenith_deg: NDArray[np.float64], sky: SkyLattice,
+    sky: SkyLattice, number: int,
 ) -> Blocks:  # fmt: skip
-    """Albedo, its uncertainty, snow fraction and quality of one window of one scene."""
+    """Albedo, its uncertainty, snow fraction and quality of one window of scene `number` of the day."""
     dn, nodata, flags = reader.read(window)
     out = empty_layers((window.rows, window.cols))
     albedo_block(
-        dn, scale, offset, nodata, flags, window.row, window.col, zenith_deg, sky.row_step, sky.col_step,
+        dn, scale, offset, nodata, flags, window.row, window.col, sky.zenith_deg[number], sky.row_step, sky.col_step,
         **numbers.kernel_arguments(), bits=tuple(np.uint8(bit) for bit in FLAG_BITS), fill=np.int16(stored_fill()),
         albedo=out["albedo"], albedo_u=out["albedo_u"], snow_fraction=out["snow_fraction"], quality=out["quality"],
     )  # fmt: skip
+    if sky.shapes:
+        carry_block(
+            out["albedo"], out["albedo_u"], out["quality"], np.uint8(flag_bit("snow")), sky.shapes[number].values,
+            sky.row_step, sky.col_step, window.row, window.col, carried_share(), np.int16(stored_fill()),
+        )  # fmt: skip
     return out
 
 
@@ -88,15 +107,98 @@ def merge(scenes: list[Blocks]) -> Blocks:
     return first
 
 
+@dataclass(frozen=True, eq=False)
+class Light:
+    """All that the fluxes of a tile-day need beside its maps.
+
+    Attributes
+    ----------
+    sky : the day's light; errors of insolation, relative: shared, local.
+    around : albedo of the surroundings on coarse cells of `step` cells; None on flat ground.
+    night : longwave at nodes x levels; None where it is not asked for; its errors [W m-2]: shared, local.
+    emissivity : of snow, other ground, and the covers of `places`.
+    cells, factors : of a supplied grid whose means are kept on slopes, and what brings them back.
+    """
+
+    sky: SkyLattice
+    errors: tuple[float, float]
+    around: NDArray[np.float64] | None = None
+    step: int = 1
+    night: Lattice | None = None
+    night_errors: tuple[float, float] = (0.0, 0.0)
+    emissivity: NDArray[np.float64] | None = None
+    places: Mapping[int, int] = field(default_factory=dict)
+    cells: SourceCells | None = None
+    factors: NDArray[np.float64] | None = None
+
+
+def light_of_all_ground(elevation_m: NDArray[np.float32], relief: Relief, window: Window, light: Light) -> NDArray[np.int16]:
+    """Insolation on slopes of every cell with a height, seen or not: what a supplied grid's mean is compared with."""
+    assert light.around is not None
+    everywhere = ~np.isnan(elevation_m)
+    return slope_insolation(everywhere, elevation_m, relief, light.around, light.step, window, light.sky)["insolation"]
+
+
 def flux_layers(
-    blocks: Blocks, elevation_m: NDArray[np.float32], window: Window, sky: SkyLattice, relative_u: float
-) -> None:
-    """Add insolation, absorbed shortwave and its uncertainty to the blocks of a window."""
-    shape = blocks["albedo"].shape
-    made = {name: np.empty(shape, np.int16) for name in ("insolation", "absorbed_shortwave", "absorbed_shortwave_u")}
-    flux_block(
-        blocks["albedo"], blocks["albedo_u"], elevation_m, window.row, window.col, **sky.flux_arguments(),
-        relative_u=relative_u, fill=np.int16(stored_fill("insolation")), insolation=made["insolation"],
-        absorbed=made["absorbed_shortwave"], absorbed_u=made["absorbed_shortwave_u"],
+    blocks: Blocks, elevation_m: NDArray[np.float32], relief: Relief | None, cover: NDArray[Any] | None, window: Window,
+    light: Light,
+) -> None:  # fmt: skip
+    """Add insolation and all fluxes that follow from it to the blocks of a window.
+
+    Parameters
+    ----------
+    relief : slope and horizons of the window; None: flat ground.
+    cover : land cover codes of the window, where an emissivity goes by cover.
+    """
+    albedo, shape = blocks["albedo"], blocks["albedo"].shape
+    if relief is None or light.around is None:
+        blocks["insolation"] = flat_insolation(albedo, elevation_m, window, light.sky)
+    else:
+        seen = albedo != stored_fill()
+        blocks.update(slope_insolation(seen, elevation_m, relief, light.around, light.step, window, light.sky))
+        if light.cells is not None and light.factors is not None:
+            numbers = light.cells.numbers(window)
+            for name in ("insolation", "terrain_light"):
+                blocks[name] = rescaled(blocks[name], light.factors, numbers)
+    made = {name: np.empty(shape, np.int16) for name in ("absorbed_shortwave", "absorbed_shortwave_u")}
+    absorbed_block(
+        albedo, blocks["albedo_u"], blocks["insolation"], *light.errors, np.int16(stored_fill()),
+        float(layer("absorbed_shortwave_u").high), *made.values(),
     )  # fmt: skip
     blocks.update(made)
+    if light.night is not None and light.emissivity is not None:
+        covers = cover_places(cover, dict(light.places), shape)
+        net_layers(blocks, elevation_m, covers, light.emissivity, relief, window, light.night, light.night_errors)
+
+
+class Around:
+    """Gathers the albedo of a tile on coarse cells, block by block, from any number of threads; sums are integers."""
+
+    def __init__(self, rows: int, cols: int, step: int) -> None:
+        self.step = step
+        self._sums = np.zeros((2, -(-rows // step), -(-cols // step)), np.int64)
+        self._lock = threading.Lock()
+
+    def add(self, albedo: NDArray[np.int16], window: Window) -> None:
+        """Add the seen cells of one window."""
+        seen = albedo != stored_fill()
+        sums = []
+        for values in (np.where(seen, albedo, 0).astype(np.int64), seen.astype(np.int64)):
+            rows = np.arange(window.row, window.row + window.rows) // self.step
+            cols = np.arange(window.col, window.col + window.cols) // self.step
+            down = np.add.reduceat(values, np.nonzero(np.diff(rows, prepend=-1))[0], axis=0)
+            sums.append(np.add.reduceat(down, np.nonzero(np.diff(cols, prepend=-1))[0], axis=1))
+        i, j = window.row // self.step, window.col // self.step
+        with self._lock:
+            self._sums[:, i : i + sums[0].shape[0], j : j + sums[0].shape[1]] += np.stack(sums)
+
+    def mean(self) -> NDArray[np.float64]:
+        """Albedo of the coarse cells; one without a seen cell takes the mean of its nearest neighbours that have some."""
+        total, count = self._sums
+        while (count == 0).any() and (count > 0).any():
+            wide = [np.pad(one, 1) for one in (total, count)]
+            shifts = [(i, j) for i in range(3) for j in range(3)]
+            near = [sum(w[i : i + total.shape[0], j : j + total.shape[1]] for i, j in shifts) for w in wide]
+            empty = count == 0
+            total, count = np.where(empty, near[0], total), np.where(empty, near[1], count)
+        return np.asarray(total / np.maximum(count, 1) * layer("albedo").step)

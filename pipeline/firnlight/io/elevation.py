@@ -1,0 +1,110 @@
+"""How high is the ground of a tile and around it, on the tile's own grid?"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from pathlib import Path
+
+import numpy as np
+import rasterio
+from numpy.typing import NDArray
+from rasterio.enums import Resampling
+from rasterio.warp import reproject, transform_bounds
+
+from firnlight.core.errors import InputProblem
+from firnlight.core.grid import Grid, Window
+from firnlight.io.ground import is_geographic
+from firnlight.io.rasters import dataset_grid, open_raster, read_window
+
+SQUARE = 1e-6  # relative difference of a cell's sides that is rounding
+
+
+def square_cell_m(grid: Grid, where: str) -> float:
+    """Side of the tile's cells. [m]
+
+    Raises
+    ------
+    InputProblem : cells in degrees or not square: slopes and horizons cannot be worked out on them.
+    """
+    if is_geographic(grid.crs) or abs(grid.dx - grid.dy) > SQUARE * grid.dx:
+        raise InputProblem(
+            where, "grid", f"cells of {grid.dx:g} x {grid.dy:g} in {grid.crs[:40]}", "square cells in metres",
+            "warp scenes and elevation to a projected grid, or set insolation.terrain = false",
+        )  # fmt: skip
+    return grid.dx
+
+
+def bounds_in(grid: Grid, crs: str) -> tuple[float, float, float, float]:
+    """Left, bottom, right, top of a grid in another CRS."""
+    box = transform_bounds(grid.crs, crs, grid.left, grid.bottom, grid.right, grid.top)
+    return float(box[0]), float(box[1]), float(box[2]), float(box[3])
+
+
+def reaches(other: Grid, grid: Grid, margin_m: float) -> bool:
+    """Whether `other` covers some ground within `margin_m` of `grid`."""
+    left, bottom, right, top = bounds_in(other, grid.crs)
+    return (
+        left < grid.right + margin_m
+        and right > grid.left - margin_m
+        and bottom < grid.top + margin_m
+        and top > grid.bottom - margin_m
+    )
+
+
+def with_margin(
+    grid: Grid, window: Window, margin: int, own: str | Path, around: Iterable[str | Path]
+) -> NDArray[np.float32]:
+    """Elevation of a window of a tile and `margin` cells around it.
+
+    Parameters
+    ----------
+    own : the tile's elevation, on its grid.
+    around : other files that may cover the margin, the best last; any CRS and cell size, read by bilinear interpolation.
+
+    Returns
+    -------
+    (rows + 2 margin, cols + 2 margin); NaN where no file knows the ground. [m]
+
+    Raises
+    ------
+    InputProblem : a file is damaged.
+    """
+    rows, cols = window.rows + 2 * margin, window.cols + 2 * margin
+    out = np.full((rows, cols), np.nan, np.float32)
+    left = grid.left + (window.col - margin) * grid.dx
+    top = grid.top - (window.row - margin) * grid.dy
+    place = rasterio.Affine(grid.dx, 0, left, 0, -grid.dy, top)
+    for path in around:
+        with open_raster(path) as source:
+            dataset_grid(source)  # refuses what has no place
+            try:
+                found = np.full((rows, cols), np.nan, np.float32)
+                reproject(
+                    rasterio.band(source, 1), found, dst_transform=place, dst_crs=grid.crs, dst_nodata=np.nan,
+                    resampling=Resampling.bilinear,
+                )  # fmt: skip
+            except rasterio.errors.RasterioError as error:
+                raise InputProblem(
+                    str(path), "elevation", str(error), "a readable raster", "deliver the file again"
+                ) from None
+        np.copyto(out, found, where=~np.isnan(found))
+    row0, col0 = max(window.row - margin, 0), max(window.col - margin, 0)
+    row1 = min(window.row + window.rows + margin, grid.rows)
+    col1 = min(window.col + window.cols + margin, grid.cols)
+    with open_raster(own) as source:
+        values = own_heights(source, Window(row0, col0, row1 - row0, col1 - col0))
+    at = (
+        slice(row0 - window.row + margin, row1 - window.row + margin),
+        slice(col0 - window.col + margin, col1 - window.col + margin),
+    )
+    np.copyto(out[at], values, where=~np.isnan(values))
+    return out
+
+
+def own_heights(dataset: object, window: Window) -> NDArray[np.float32]:
+    """Elevation of a window of a tile: (rows, cols); NaN where the file has none. [m]"""
+    values: NDArray[np.float32] = read_window(dataset, window).astype(np.float32)
+    nodata = getattr(dataset, "nodata", None)
+    if nodata is not None:
+        values[values == np.float32(nodata)] = np.nan
+    return values

@@ -1,0 +1,282 @@
+"""What do the weather files say of a tile's day? Read at the tile's lattice nodes, with a key of what was read."""
+
+from __future__ import annotations
+
+import datetime as dt
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+from functools import lru_cache
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import xxhash
+from numpy.typing import NDArray
+
+from firnlight.core.errors import InputProblem, SettingsProblem
+from firnlight.core.lattice import Lattice
+from firnlight.core.settings import GridField, GridFile, StationSource, SuppliedGrid, WeatherGrid, Workflow
+from firnlight.io.grid_time import DayMissing
+from firnlight.io.grids import DayField, cell_edges, field_at, on_grid, read_day, read_static_field
+from firnlight.io.station_series import read_series
+from firnlight.physics import humidity
+from firnlight.physics.clearsky import Atmosphere
+from firnlight.physics.day_sky import ClearIndex, Cloud, clear_sky_index
+from firnlight.stages.insolation import SkyInputs, SourceCells, atmosphere
+from firnlight.stages.longwave import Air
+
+Floats = NDArray[np.float64]
+AROUND_DEG = 0.5  # read beside the tile
+_AIR = {
+    "aerosol_500nm": "aerosol_optical_depth", "aerosol_380nm": "aerosol_optical_depth",
+    "water_vapour_cm": "water_vapour", "ozone_cm": "ozone",
+}  # fmt: skip
+_WHOLE_DAY = np.array([[0.0, 24.0]])
+
+
+@dataclass(frozen=True, eq=False)
+class Weather:
+    """A day's weather at the lattice nodes of a tile; `key` tells its numbers, `gaps` what the files lack."""
+
+    sky: SkyInputs
+    air: Air | None
+    key: str
+    gaps: tuple[str, ...] = ()
+    cells: SourceCells | None = None  # of a supplied grid that is to be spread over slopes
+
+
+class _Reader:
+    """Reads fields of one day at the nodes of one tile and remembers what was missing."""
+
+    def __init__(self, workflow: Workflow, day: dt.date, lon: Lattice, lat: Lattice) -> None:
+        self.workflow, self.day = workflow, day
+        self.lon, self.lat = lon.values.ravel(), lat.values.ravel()
+        west, east = float(self.lon.min()), float(self.lon.max())
+        south, north = float(self.lat.min()), float(self.lat.max())
+        self.box = west - AROUND_DEG, south - AROUND_DEG, east + AROUND_DEG, north + AROUND_DEG
+        self.gaps: list[str] = []
+
+    def path(self, written: str) -> Path | None:
+        """The day's file; None where a file of one day is not there yet.
+
+        Raises
+        ------
+        SettingsProblem : the one file of all days is not there.
+        """
+        named = written.replace("{date}", self.day.isoformat()).replace("{year}", str(self.day.year))
+        path = self.workflow.path(named)
+        if path.exists():
+            return path
+        if named != written:
+            self.gaps.append(f"no file {path.name}")
+            return None
+        raise SettingsProblem(
+            str(self.workflow.file), "weather file", f"no file {path}", "a file of grids", "correct the path"
+        )
+
+    def field(self, file: GridFile, variable: str | None, quantity: str) -> DayField | None:
+        """One variable of the day; None where the file has nothing of it."""
+        path = self.path(file.grid)
+        if path is None:
+            return None
+        try:
+            return _read_day(path, _stamp(path), variable, self.day, quantity, self.box, file)
+        except DayMissing as problem:
+            self.gaps.append(f"{path.name}: {problem.found}")
+            return None
+
+    def at_nodes(self, field: DayField | None) -> tuple[Floats, Floats]:
+        """Edges (k, 2) and values (k, n); one NaN step where there is no field."""
+        if field is None:
+            return _WHOLE_DAY, np.full((1, self.lon.size), np.nan)
+        values = field_at(field, self.lon, self.lat)
+        if np.isnan(values).any():
+            self.gaps.append(f"{field.name}: gaps on {self.day}")
+        return field.edges_h, values
+
+    def static(self, file: GridFile, variable: str | None, quantity: str) -> Floats:
+        path = self.path(file.grid)
+        if path is None:
+            return np.full(self.lon.size, np.nan)
+        field = _read_static(path, _stamp(path), variable, self.day, quantity, self.box, file)
+        return np.asarray(field_at(field, self.lon, self.lat)[0])
+
+    def height(self, file: GridFile, elevation: str | GridField | None) -> Floats | None:
+        """Height of the weather's own ground; None where it is not told. [m]"""
+        if elevation is None:
+            return None
+        if isinstance(elevation, GridField):
+            return self.static(elevation, elevation.variable, "surface_altitude")
+        return self.static(file.model_copy(update={"units": None}), elevation, "surface_altitude")
+
+
+def _stamp(path: Path) -> tuple[int, int]:
+    found = path.stat()
+    return found.st_size, found.st_mtime_ns
+
+
+@lru_cache(maxsize=64)
+def _read_day(
+    path: Path, stamp: tuple[int, int], variable: str | None, day: dt.date, quantity: str, box: Any, file: GridFile
+) -> DayField:
+    # units, steps and starts told in the settings are those of the flux; a file of several states tells its own
+    told: dict[str, Any] = {"units": file.units} if not isinstance(file, WeatherGrid) else {}
+    return read_day(
+        path, variable, day, quantity, around=box, label=file.label, step_hours=file.step_hours,
+        accumulated=file.accumulated, starts_hours=file.starts_hours, crs=file.crs, **told,
+    )  # fmt: skip
+
+
+@lru_cache(maxsize=64)
+def _read_static(
+    path: Path, stamp: tuple[int, int], variable: str | None, day: dt.date, quantity: str, box: Any, file: GridFile
+) -> DayField:
+    return read_static_field(path, variable, day, quantity, around=box, units=file.units, crs=file.crs)
+
+
+@lru_cache(maxsize=8)
+def _station_series(path: Path, stamp: tuple[int, int], column: str, label: Any, time: str, offset_h: float) -> Any:
+    return read_series(path, column, "flux", label=label, time_column=time, utc_offset_hours=offset_h)
+
+
+def needs_weather(workflow: Workflow) -> bool:
+    """Whether any file of weather is named in the settings."""
+    settings = workflow.insolation
+    gridded = any(isinstance(value, GridField) for _, value in settings.atmosphere)
+    return gridded or settings.source != "clear-sky" or settings.cloud is not None or workflow.longwave is not None
+
+
+def day_weather(workflow: Workflow, day: dt.date, longitude_deg: Lattice, latitude_deg: Lattice) -> Weather:
+    """Read a tile's day.
+
+    Parameters
+    ----------
+    longitude_deg, latitude_deg : the tile's lattice nodes. [deg]
+
+    Returns
+    -------
+    Weather   A day, an hour or a place that the files lack is NaN there and named in `gaps`.
+
+    Raises
+    ------
+    InputProblem : a file cannot be read or understood. SettingsProblem : a file is not there.
+    """
+    if not needs_weather(workflow):
+        return Weather(SkyInputs(), None, "")
+    reader = _Reader(workflow, day, longitude_deg, latitude_deg)
+    air, numbers = _atmosphere(reader)
+    settings = workflow.insolation
+    cloud, supplied, cells = None, None, None
+    if settings.cloud is not None:
+        one = settings.cloud
+        edges, values = reader.at_nodes(reader.field(one, one.variable, "cloud_fraction"))
+        cloud = Cloud(edges.mean(axis=1), np.clip(values, 0, 1))
+    elif isinstance(settings.source, StationSource):
+        supplied = _from_station(reader, settings.source.station, air)
+    elif isinstance(settings.source, SuppliedGrid):
+        grid = settings.source
+        field = reader.field(grid, grid.variable, "flux")
+        edges, values = reader.at_nodes(field)
+        if field is not None and settings.terrain:
+            cells = _cells(field, longitude_deg, latitude_deg)
+        height = reader.height(grid, grid.elevation)
+        place = Atmosphere(*(one[:, np.newaxis] for one in numbers)) if numbers else air  # type: ignore[arg-type]
+        at_m = np.zeros(reader.lon.size) if height is None else height
+        supplied = clear_sky_index(day, edges, np.maximum(values, 0), reader.lat, reader.lon, at_m, place)
+        supplied = replace(supplied, by_height=height is not None)
+    sky = SkyInputs(numbers, cloud, supplied)
+    night = _air(reader, workflow.longwave.source) if workflow.longwave is not None else None
+    return Weather(sky, night, _key(sky, night, cells), tuple(dict.fromkeys(reader.gaps)), cells)
+
+
+def _cells(field: DayField, lon: Lattice, lat: Lattice) -> SourceCells:
+    x, y = on_grid(field, lon.values, lat.values)
+    hours = np.diff(field.edges_h, axis=1)[:, :, np.newaxis]
+    return SourceCells(
+        Lattice(lon.row_step, lon.col_step, x), Lattice(lat.row_step, lat.col_step, y), *cell_edges(field),
+        np.maximum((field.values * hours).sum(axis=0) / 24, 0.0),
+    )  # fmt: skip
+
+
+def _atmosphere(reader: _Reader) -> tuple[Atmosphere, tuple[Floats, ...] | None]:
+    settings = reader.workflow.insolation.atmosphere
+    air = atmosphere(settings)
+    fields = {name: value for name, value in settings if isinstance(value, GridField)}
+    if not fields:
+        return air, None
+    found = {name: reader.static(one, one.variable, _AIR[name]) for name, one in fields.items()}
+    if "aerosol_500nm" in found and settings.aerosol_380nm is None:
+        ratio = Atmosphere.of(1.0, 1.0, 0.3).aerosol_380nm
+        found["aerosol_380nm"] = found["aerosol_500nm"] * ratio
+    names = ("aerosol_500nm", "aerosol_380nm", "water_vapour_cm", "ozone_cm", "forward_scatter")
+    ones = np.ones(reader.lon.size)
+    return air, tuple(found.get(name, number * ones) for name, number in zip(names, air.numbers(), strict=True))
+
+
+def _from_station(reader: _Reader, name: str, air: Atmosphere) -> ClearIndex:
+    station = reader.workflow.stations[name]
+    path = reader.path(station.file)
+    if path is None:
+        return clear_sky_index(
+            reader.day, _WHOLE_DAY, np.full((1, reader.lon.size), np.nan), reader.lat, reader.lon,
+            np.zeros(reader.lon.size), air,
+        )  # fmt: skip
+    series = _station_series(path, _stamp(path), station.sw_down, station.label, station.time, station.utc_offset_h)
+    one = series.day(reader.day)
+    if np.isnan(one.values).any():
+        reader.gaps.append(f"station {name}: gaps on {reader.day}")
+    lat, lon, height = (np.array([v]) for v in (station.latitude, station.longitude, station.elevation_m))
+    found = clear_sky_index(reader.day, one.edges_h, np.maximum(one.values, 0)[:, np.newaxis], lat, lon, height, air)
+    return replace(found, index=np.repeat(found.index, reader.lon.size, axis=1))
+
+
+def _air(reader: _Reader, grid: WeatherGrid) -> Air:
+    def read(variable: str, quantity: str) -> tuple[Floats, Floats]:
+        return reader.at_nodes(reader.field(grid, variable, quantity))
+
+    edges, temperature = read(grid.air_temperature, "air_temperature")
+    turn: dict[str, Callable[[Floats], Floats]] = {
+        "vapour_pressure": lambda values: values,
+        "dew_point": humidity.vapour_from_dew_point,
+        "relative_humidity": lambda values: humidity.vapour_from_relative_humidity(values, temperature),
+    }
+    quantity, change = next((q, f) for q, f in turn.items() if getattr(grid, q) is not None)
+    others = {quantity: getattr(grid, quantity)}
+    if grid.cloud_fraction is not None:
+        others["cloud_fraction"] = grid.cloud_fraction
+    found = {}
+    for name, variable in others.items():
+        their_edges, values = read(variable, name)
+        if their_edges.shape != edges.shape or not np.allclose(their_edges, edges):
+            if np.isnan(values).all() or np.isnan(temperature).all():
+                values = np.full(temperature.shape, np.nan)
+            else:
+                raise InputProblem(
+                    grid.grid, variable, "other times than air temperature", "the times of air temperature",
+                    "deliver all weather on the same times",
+                )  # fmt: skip
+        found[name] = values
+    cloud = found.get("cloud_fraction")
+    height = reader.height(grid, grid.elevation)
+    return Air(
+        np.diff(edges, axis=1)[:, 0], temperature, np.maximum(change(found[quantity]), 0),
+        None if cloud is None else np.clip(cloud, 0, 1), height,
+    )  # fmt: skip
+
+
+def _key(sky: SkyInputs, air: Air | None, cells: SourceCells | None) -> str:
+    """A digest of all numbers read."""
+    digest = xxhash.xxh3_128()
+    parts: list[Any] = [*(sky.air or ())]
+    if sky.cloud is not None:
+        parts += [sky.cloud.hours, sky.cloud.fraction]
+    if sky.supplied is not None:
+        parts += [sky.supplied.edges_h, sky.supplied.index, np.array(sky.supplied.by_height)]
+    if cells is not None:
+        parts += [cells.x.values, cells.y.values, cells.edges_x, cells.edges_y, cells.wm2]
+    if air is not None:
+        parts += [value for value in vars(air).values() if value is not None]
+    for part in parts:
+        digest.update(str(part.shape).encode())
+        digest.update(np.ascontiguousarray(part).tobytes())
+    return digest.hexdigest()
