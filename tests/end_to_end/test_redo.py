@@ -6,10 +6,12 @@ import json
 import pytest
 import rasterio
 
-ALL = {
-    "albedo", "albedo_u", "insolation", "absorbed_shortwave", "absorbed_shortwave_u", "snow_fraction", "quality",
-    "budget", "item",
+FLUXES = {
+    "insolation", "terrain_light", "absorbed_shortwave", "absorbed_shortwave_u", "net_longwave", "net_radiation",
+    "net_radiation_u", "budget", "item",
 }  # fmt: skip
+ABSORBED = {"absorbed_shortwave", "absorbed_shortwave_u"}
+ALL = {"albedo", "albedo_u", "snow_fraction", "quality"} | FLUXES
 
 
 def kinds(names):
@@ -59,7 +61,7 @@ def test_an_edited_map_is_noticed_and_remade(done_area):
         (
             "aerosol_500nm = 0.1",
             "aerosol_500nm = 0.05",
-            {"insolation", "absorbed_shortwave", "absorbed_shortwave_u", "budget", "item"},
+            FLUXES,
         ),
         ("step = 200", "step = 400", {"budget", "item", "terrain"}),
         (
@@ -68,15 +70,31 @@ def test_an_edited_map_is_noticed_and_remade(done_area):
             {"snow_fraction", "budget", "item"},
         ),
         (
-            "[insolation]",
-            "[insolation]\nrelative_uncertainty = 0.1",
-            {"absorbed_shortwave_u", "budget", "item"},
+            "\nrelative_uncertainty = 0.01",
+            "\nrelative_uncertainty = 0.1",
+            {"absorbed_shortwave_u", "net_radiation_u", "budget", "item"},
         ),
         ('snow = "liang2001"', 'snow = "knap1999"', ALL),
+        ('method = "brutsaert1975"', 'method = "prata1996"', FLUXES - {"insolation", "terrain_light", *ABSORBED}),
+        ("\nuncertainty_wm2 = 2.0", "\nuncertainty_wm2 = 4.0", {"net_radiation_u", "budget", "item"}),
+        ("correlation_length_m = 1500.0", "correlation_length_m = 3000.0", {"budget", "item"}),
+        ("[albedo]", '[albedo]\nday = "sun path"', ALL),
         ("[store]", "[store]\nfinal_after_days = 3", set()),
         ("workers = ", "workers = 1 #", set()),
     ],
-    ids=["atmosphere", "bands", "snow fraction", "sky error", "conversion", "state", "workers"],
+    ids=[
+        "atmosphere",
+        "bands",
+        "snow fraction",
+        "sky error",
+        "conversion",
+        "longwave",
+        "longwave error",
+        "correlation",
+        "albedo of a day",
+        "state",
+        "workers",
+    ],
 )
 def test_a_setting_redoes_what_depends_on_it_and_no_more(done_area, old, new, remade):
     text = done_area.workflow.read_text(encoding="utf-8")

@@ -50,7 +50,7 @@ def budget(
       firnlight budget workflows/nightly.toml --year 2031 --every month --out budget.csv
 
     Regional statistics of the nights in the store: areas seen, albedo, incoming, reflected and absorbed
-    sunlight with uncertainty.
+    sunlight, net longwave and net radiation, with uncertainty.
 
     Reads the store; writes only the --out file (a .csv gets its units in a .json beside it).
     Next: firnlight methods
@@ -59,7 +59,7 @@ def budget(
     from firnlight.core.settings import load_workflow
     from firnlight.io.sheets import answer_bytes, write_answer
     from firnlight.report.numbers import budget_table
-    from firnlight.run.budget import CAUTIONS, UNITS, key_names, regional_budget
+    from firnlight.run.budget import UNITS, key_names, regional_budget
     from firnlight.run.store import Store
 
     settings = load_workflow(workflow)
@@ -90,7 +90,8 @@ def budget(
     if not quiet and not as_json:
         states = " and ".join(sorted({str(row["state"]) for row in answer.rows}))
         click.echo(f"{answer.area}, {answer.since} to {answer.until}, {states} as of {answer.as_of}.", err=True)
-        click.echo(f"Caution: {CAUTIONS[1]}", err=True)
+        for caution in answer.cautions[1:]:
+            click.echo(f"Caution: {caution}", err=True)
         say_next(f"firnlight budget {workflow} --out budget.csv" if out is None else "firnlight methods", quiet)
     return 0
 

@@ -25,7 +25,7 @@ class Layer:
     low, high : smallest and largest stored integer that may occur.
     parts : names of the bands of the file, in order.
     flags : bit -> meaning, for flag layers.
-    wanted_with : what the workflow must ask for to get it ("terrain", "longwave"; "" = always), or "once" for what
+    wanted_with : what the workflow must ask for to get it ("terrain", "longwave" ...; "" = always), or "once" for what
         lies under terrain/ and belongs to no day.
     """
 
@@ -81,7 +81,7 @@ def day_layers(*wanted: str) -> tuple[str, ...]:
 @cache
 def layer_names() -> tuple[str, ...]:
     """Names of all layers that a tile-day can have, in the order they are written."""
-    return day_layers("terrain", "longwave")
+    return day_layers("terrain", "slope_parallel", "longwave")
 
 
 @cache

@@ -136,6 +136,7 @@ class Insolation(_Section):
     cloud: GridField | None = None
     atmosphere: AtmosphereSettings = AtmosphereSettings()
     terrain: bool = False
+    slope_parallel: bool = False
     relative_uncertainty: Annotated[float, Field(ge=0, le=1)] = 0.05
     local_uncertainty: Annotated[float, Field(ge=0, le=1)] = 0.0
 
@@ -143,6 +144,8 @@ class Insolation(_Section):
     def _cloud_once(self) -> Insolation:
         if self.cloud is not None and self.source != "clear-sky":
             raise ValueError('`cloud` goes with source = "clear-sky" only: a supplied series holds its cloud already')
+        if self.slope_parallel and not self.terrain:
+            raise ValueError("slope_parallel needs terrain = true")
         return self
 
 
@@ -253,7 +256,12 @@ class Workflow(_Section):
     @property
     def wanted(self) -> tuple[str, ...]:
         """What is asked for beside the layers that every night makes."""
-        return ("terrain",) * self.insolation.terrain + ("longwave",) * (self.longwave is not None)
+        asked = {
+            "terrain": self.insolation.terrain,
+            "slope_parallel": self.insolation.slope_parallel,
+            "longwave": self.longwave is not None,
+        }
+        return tuple(name for name, wanted in asked.items() if wanted)
 
     def path(self, written: str) -> Path:
         """A path of the file as an absolute one."""

@@ -29,6 +29,10 @@ def workflow_text(data: str, store: str) -> str:
     at = f"{data}/" if data else ""
     classes = ", ".join(f'{code} = "{name}"' for code, name in terrain.CLASSES.items())
     air = f"aerosol_500nm = {AEROSOL_500NM}, water_vapour_cm = {WATER_VAPOUR_CM}, ozone_cm = {OZONE_CM}"
+    weather = (
+        f'grid = "{at}weather.nc", air_temperature = "air_temperature", vapour_pressure = "vapour_pressure", '
+        'cloud_fraction = "cloud_fraction", elevation = "surface_altitude"'
+    )
     return f"""\
 # The {AREA_NAME}, an invented place: a workflow to run and to copy.
 [area]
@@ -58,7 +62,21 @@ snow_fraction = "gascoin_2020"
 [insolation]
 source = "clear-sky"
 atmosphere = {{ {air} }}
-terrain = false
+terrain = true
+relative_uncertainty = 0.01            # what this invented sky errs by, shared by all cells of a day
+local_uncertainty = 0.03               # and what it errs by here and there
+
+[longwave]
+source = {{ {weather} }}
+method = "brutsaert1975"
+cloud = "kustas1994"
+lapse_k_per_m = 0.0062
+emissivity = {{ snow = 0.99, ground = 0.97 }}
+uncertainty_wm2 = 2.0
+local_uncertainty_wm2 = 6.0
+
+[uncertainty]
+correlation_length_m = 1500.0
 
 [store]
 path = "{store}"

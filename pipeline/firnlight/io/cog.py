@@ -79,7 +79,7 @@ class CogWriter:
             if layer.flags:
                 tags["flag_meanings"] = " ".join(layer.flags)
                 tags["flag_masks"] = " ".join(str(1 << bit) for bit in range(len(layer.flags)))
-            dataset.update_tags(number, **tags)
+            dataset.update_tags(number, **{name: text for name, text in tags.items() if text})
         dataset.scales = [layer.step] * len(layer.parts)
         dataset.offsets = [0.0] * len(layer.parts)
 

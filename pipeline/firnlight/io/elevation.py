@@ -52,7 +52,7 @@ def reaches(other: Grid, grid: Grid, margin_m: float) -> bool:
 
 
 def with_margin(
-    grid: Grid, window: Window, margin: int, own: str | Path, around: Iterable[str | Path]
+    grid: Grid, window: Window, margin: int, own: str | Path, around: Iterable[str | Path], unread: set[str]
 ) -> NDArray[np.float32]:
     """Elevation of a window of a tile and `margin` cells around it.
 
@@ -60,6 +60,7 @@ def with_margin(
     ----------
     own : the tile's elevation, on its grid.
     around : other files that may cover the margin, the best last; any CRS and cell size, read by bilinear interpolation.
+    unread : told of each of them that cannot be read: it is the ground of another tile, and this one goes on without.
 
     Returns
     -------
@@ -67,7 +68,7 @@ def with_margin(
 
     Raises
     ------
-    InputProblem : a file is damaged.
+    InputProblem : the tile's own file is damaged.
     """
     rows, cols = window.rows + 2 * margin, window.cols + 2 * margin
     out = np.full((rows, cols), np.nan, np.float32)
@@ -75,18 +76,17 @@ def with_margin(
     top = grid.top - (window.row - margin) * grid.dy
     place = rasterio.Affine(grid.dx, 0, left, 0, -grid.dy, top)
     for path in around:
-        with open_raster(path) as source:
-            dataset_grid(source)  # refuses what has no place
-            try:
-                found = np.full((rows, cols), np.nan, np.float32)
+        found = np.full((rows, cols), np.nan, np.float32)
+        try:
+            with open_raster(path) as source:
+                dataset_grid(source)  # refuses what has no place
                 reproject(
                     rasterio.band(source, 1), found, dst_transform=place, dst_crs=grid.crs, dst_nodata=np.nan,
                     resampling=Resampling.bilinear,
                 )  # fmt: skip
-            except rasterio.errors.RasterioError as error:
-                raise InputProblem(
-                    str(path), "elevation", str(error), "a readable raster", "deliver the file again"
-                ) from None
+        except (rasterio.errors.RasterioError, InputProblem):
+            unread.add(str(path))
+            continue
         np.copyto(out, found, where=~np.isnan(found))
     row0, col0 = max(window.row - margin, 0), max(window.col - margin, 0)
     row1 = min(window.row + window.rows + margin, grid.rows)

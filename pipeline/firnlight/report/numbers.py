@@ -68,6 +68,12 @@ def budget_table(rows: Sequence[Mapping[str, object]], by: Sequence[str], severa
         "absorbed W m-2",
         [by_uncertainty(number(row, "absorbed_wm2"), number(row, "absorbed_u")) for row in rows],
     )
+    if any(math.isfinite(number(row, "net_radiation_wm2")) for row in rows):
+        add("net longwave W m-2", [plain(row["net_longwave_wm2"], 1) for row in rows])
+        add(
+            "net radiation W m-2",
+            [by_uncertainty(number(row, "net_radiation_wm2"), number(row, "net_radiation_u")) for row in rows],
+        )
     add("absorbed GJ", [plain(row["absorbed_gj"], 0) for row in rows])
     widths = [max(len(title), *map(len, cells)) if cells else len(title) for title, cells in columns]
 

@@ -31,10 +31,10 @@ UNITS = {
     "absorbed_gj": "GJ", "melt_potential_mm_day": "mm", "limited_share": "1", "result": "",
 }  # fmt: skip
 CAUTIONS = (
+    "Maps may be days old: their dates are in the table.",
     "Radiative melt potential is not runoff: no cold content, rain on snow, turbulent heat, refreezing or routing.",
     "Not for flood warning or avalanche judgement by itself: use the warnings of the responsible national and local "
     "services, follow local codes, and have results that people's safety rests on reviewed by licensed practitioners.",
-    "Maps may be days old: their dates are in the table.",
 )
 CLOUDLESS = "Insolation is that of a cloudless sky: it overstates the energy of cloudy days."
 _EMPTY = Totals()

@@ -173,7 +173,8 @@ class Ground:
         ground, folder = self.of(tile), self.store.relief(tile)
         if ground.relief_key and not is_made(folder, ground.relief_key):
             assert ground.elevation is not None
-            build_relief(self.grids[tile], ground.elevation, ground.around, folder, ground.relief_key, workers)
+            table = build_relief(self.grids[tile], ground.elevation, ground.around, folder, ground.relief_key, workers)
+            self.warnings += [f"{tile}: {one} cannot be read: its ground casts no shadow here" for one in table.unread]
 
     def note_outside(self) -> None:
         """Write down each region's ground outside every tile, unless the same is written already."""

@@ -11,8 +11,11 @@ from collections.abc import Iterable
 from dataclasses import dataclass, field
 from pathlib import Path
 
+import numpy as np
+
 from firnlight.core.errors import InputProblem, NoRoom, SettingsProblem
 from firnlight.core.grid import Grid
+from firnlight.core.layers import layer
 from firnlight.core.settings import Workflow, load_workflow
 from firnlight.io.atomic import sweep
 from firnlight.io.cog import TILE
@@ -27,7 +30,7 @@ from firnlight.run.tile import Made, job_call
 from firnlight.run.tile_sources import TileJob
 
 FINISHED_BYTES_PER_CELL = 8  # 4.8 measured on a demo tile
-BYTES_PER_CELL = 2 * 22  # scratch and finished maps, uncompressed: what a tile-day may need at worst
+RELIEF_BYTES_PER_CELL = 40  # horizons, slope, aspect and sky view of a tile, and their scratch
 CELLS_PER_MINUTE = 5e8  # order of size on two cores, for the estimate only
 
 
@@ -141,10 +144,11 @@ def _run(
     if jobs:
         _ = planner.ground.regions  # polygons that cannot be used stop the night before anything is written
         store.need_room(_room_needed(jobs.values()))
-    _prepare_ground(planner, jobs)
+    _prepare_ground(planner, jobs, outcome)
     outcome.warnings = [*planner.ground.warnings, *planner.gaps]
     if not jobs:
-        ledger.record_refusals(planner.refusals, started, due)
+        lost = [_failure(name, trace) for name, trace in outcome.failed.items()]
+        ledger.record_refusals([*planner.refusals, *lost], started, due)
         outcome.refusals = planner.refusals
         outcome.seconds = time.monotonic() - begun
         return outcome
@@ -189,12 +193,31 @@ def _cells_on_disk(grid: Grid) -> int:
 
 
 def _room_needed(jobs: Iterable[TileJob]) -> int:
-    """Scratch and maps of the largest tile-day, and the finished maps of the others."""
-    cells = sorted(_cells_on_disk(job.grid) for job in jobs)
-    return cells[-1] * BYTES_PER_CELL + sum(cells[:-1]) * FINISHED_BYTES_PER_CELL
+    """Scratch and maps of the largest tile-day, the finished maps of the others, and the relief of each tile."""
+    jobs = list(jobs)
+    largest = max(jobs, key=lambda job: _cells_on_disk(job.grid))
+    others = sum(_cells_on_disk(job.grid) for job in jobs) - _cells_on_disk(largest.grid)
+    tiles = {job.tile: _cells_on_disk(job.grid) for job in jobs if job.ground.relief_key}
+    scratch = 2 * _cells_on_disk(largest.grid) * _bytes_per_cell(largest)
+    return scratch + others * FINISHED_BYTES_PER_CELL + sum(tiles.values()) * RELIEF_BYTES_PER_CELL
 
 
-def _prepare_ground(planner: Planner, jobs: dict[str, TileJob]) -> None:
+def _bytes_per_cell(job: TileJob) -> int:
+    """Of all layers of a tile-day, uncompressed."""
+    return sum(np.dtype(layer(name).dtype).itemsize * len(layer(name).parts) for name in job.layers)
+
+
+def _no_room(error: OSError, planner: Planner) -> NoRoom | None:
+    """What a failed write means where the disk, not the file, was the reason."""
+    if error.errno not in (errno.ENOSPC, errno.EDQUOT, errno.EFBIG):
+        return None
+    return NoRoom(
+        error.filename or str(planner.store.root), "free disk space", error.strerror or "none left", "room for the maps",
+        "make room, then run the same command: it goes on where it stopped",
+    )  # fmt: skip
+
+
+def _prepare_ground(planner: Planner, jobs: dict[str, TileJob], outcome: Outcome) -> None:
     """Bring the static ground of every tile that has or will have totals up to date; a bad tile loses its jobs."""
     tiles = {job.tile for job in jobs.values()} | {tile for tile, _, _ in planner.products}
     for tile in sorted(tiles & set(planner.ground.grids)):
@@ -207,6 +230,13 @@ def _prepare_ground(planner: Planner, jobs: dict[str, TileJob]) -> None:
         except InputProblem as problem:
             for name in [name for name, job in jobs.items() if job.tile == tile]:
                 planner.refusals.append(Refusal(name, str(problem), jobs.pop(name).day, tile))
+        except OSError as error:
+            full = _no_room(error, planner)
+            if full is not None:
+                raise full from error
+            for name in [name for name, job in jobs.items() if job.tile == tile]:
+                del jobs[name]
+                outcome.failed[name] = "".join(traceback.format_exception(error))
     if tiles:
         planner.ground.note_outside()
 
@@ -245,11 +275,9 @@ def _record(name: str, job: TileJob, result: object, planner: Planner, ledger: L
         scene = next(scene for scene in planner.scenes[job.tile, job.day] if scene.id == result.scene)
         planner.refuse(scene, result.problem)
         return job
-    if isinstance(result, OSError) and result.errno in (errno.ENOSPC, errno.EDQUOT, errno.EFBIG):
-        raise NoRoom(
-            result.filename or str(planner.store.root), "free disk space", result.strerror or "none left",
-            "room for the maps", "make room, then run the same command: it goes on where it stopped",
-        ) from result  # fmt: skip
+    full = _no_room(result, planner) if isinstance(result, OSError) else None
+    if full is not None and isinstance(result, OSError):
+        raise full from result
     if isinstance(result, InputProblem):
         planner.refusals.append(Refusal(name, str(result), job.day, job.tile))
         return None
@@ -315,6 +343,7 @@ def plan_data(decisions: list[Decision], refusals: list[Refusal]) -> dict[str, o
     jobs = [one.job for one in decisions if one.job is not None]
     read = sum(size for job in jobs for _, size, _ in job.inputs)
     cells = sum(job.grid.rows * job.grid.cols for job in jobs)
+    written = sum(job.grid.rows * job.grid.cols * _bytes_per_cell(job) for job in jobs)
     return {
         "version": 1,
         "decisions": [
@@ -323,6 +352,6 @@ def plan_data(decisions: list[Decision], refusals: list[Refusal]) -> dict[str, o
         "refused": [{"input": one.subject, "reason": one.reason} for one in refusals],
         "estimate": {
             "tile_days": len(jobs), "scenes": sum(len(job.scenes) for job in jobs), "read_gb": read / 1e9,
-            "write_gb": cells * BYTES_PER_CELL / 2 / 1e9, "minutes": cells / CELLS_PER_MINUTE,
+            "write_gb": written / 1e9, "minutes": cells / CELLS_PER_MINUTE,
         },
     }  # fmt: skip

@@ -42,6 +42,7 @@ class ReliefTable:
     key: str
     low_m: float
     high_m: float
+    unread: tuple[str, ...] = ()  # elevation files of the ground around that could not be read
 
 
 def table_path(folder: Path) -> Path:
@@ -60,8 +61,9 @@ def read_relief_table(folder: Path) -> ReliefTable:
     InputProblem : damaged or gone.
     """
     try:
-        return ReliefTable(**json.loads(table_path(folder).read_text(encoding="utf-8")))
-    except (OSError, ValueError, TypeError) as error:
+        body = json.loads(table_path(folder).read_text(encoding="utf-8"))
+        return ReliefTable(body["key"], body["low_m"], body["high_m"], tuple(body["unread"]))
+    except (OSError, ValueError, TypeError, KeyError) as error:
         raise InputProblem(
             str(table_path(folder)), "relief", str(error), "the table of a tile's relief",
             "run `firnlight night`: it makes it again",
@@ -107,7 +109,7 @@ def build_relief(grid: Grid, own: str, around: Sequence[str], folder: Path, key:
     margin = margin_cells(cell_m)
     table_path(folder).unlink(missing_ok=True)  # a table beside other rasters would be believed
     folder.mkdir(parents=True, exist_ok=True)
-    low, high = math.inf, -math.inf
+    low, high, unread = math.inf, -math.inf, set[str]()
     tags = {"FIRNLIGHT_KEY": key}
     writers = {name: CogWriter(folder / f"{name}.tif", layer(name), grid, tags) for name in NAMES}
     try:
@@ -116,7 +118,7 @@ def build_relief(grid: Grid, own: str, around: Sequence[str], folder: Path, key:
                 horizon = stack.enter_context(rasterio.open(scratch, "w", **_horizon_profile(grid)))
                 pool = stack.enter_context(ThreadPoolExecutor(workers))
                 for core in _cores(grid):
-                    height = with_margin(grid, core, margin, own, around)
+                    height = with_margin(grid, core, margin, own, around, unread)
                     inside = height[margin : margin + core.rows, margin : margin + core.cols]
                     if not np.isnan(inside).all():
                         low, high = min(low, float(np.nanmin(inside))), max(high, float(np.nanmax(inside)))
@@ -130,7 +132,7 @@ def build_relief(grid: Grid, own: str, around: Sequence[str], folder: Path, key:
     finally:
         for writer in writers.values():
             writer.discard()
-    table = ReliefTable(key, low, high)
+    table = ReliefTable(key, low, high, tuple(sorted(unread)))
     write_text(table_path(folder), json.dumps(vars(table)) + "\n")
     return table
 

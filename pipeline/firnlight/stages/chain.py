@@ -17,12 +17,14 @@ from firnlight.physics.chain_fast import absorbed_block, albedo_block, carry_blo
 from firnlight.stages.albedo import ALBEDO, ALBEDO_U, SNOW, AlbedoNumbers, carried_share, empty_layers, stored_fill
 from firnlight.stages.insolation import (
     INSOLATION,
+    SLOPE_PARALLEL,
     Relief,
     SkyLattice,
     SourceCells,
     flat_insolation,
     rescaled,
     slope_insolation,
+    slope_parallel,
 )
 from firnlight.stages.longwave import LONGWAVE, NET, NET_U, cover_places, net_layers
 from firnlight.stages.radiation import RADIATION, RADIATION_U
@@ -30,7 +32,7 @@ from firnlight.stages.stage import Stage
 from firnlight.stages.summarise import SUMMARISE
 
 STAGES: tuple[Stage, ...] = (
-    ALBEDO, ALBEDO_U, SNOW, INSOLATION, RADIATION, RADIATION_U, LONGWAVE, NET, NET_U, SUMMARISE,
+    ALBEDO, ALBEDO_U, SNOW, INSOLATION, SLOPE_PARALLEL, RADIATION, RADIATION_U, LONGWAVE, NET, NET_U, SUMMARISE,
 )  # fmt: skip
 Blocks = dict[str, NDArray[Any]]
 FLAG_BITS = tuple(flag_bit(name) for name in layer("quality").flags)
@@ -160,6 +162,7 @@ def flux_layers(
             numbers = light.cells.numbers(window)
             for name in ("insolation", "terrain_light"):
                 blocks[name] = rescaled(blocks[name], light.factors, numbers)
+        blocks["insolation_slope"] = slope_parallel(blocks["insolation"], relief.slope)
     made = {name: np.empty(shape, np.int16) for name in ("absorbed_shortwave", "absorbed_shortwave_u")}
     absorbed_block(
         albedo, blocks["albedo_u"], blocks["insolation"], *light.errors, np.int16(stored_fill()),

@@ -30,6 +30,8 @@ INSOLATION = Stage(
     ("insolation",),
 )  # fmt: skip
 
+SLOPE_PARALLEL = Stage("slope-parallel insolation", 1, ("insolation", "terrain"), ("insolation_slope",), ())
+
 # heights of the levels between which the kernel interpolates; the curvature of insolation with height over one
 # step stays under 0.01 W m-2 (tests/stages/test_insolation.py)
 LOWEST_M, HIGHEST_M, LEVEL_STEP_M = -500.0, 9000.0, 250.0
@@ -329,10 +331,21 @@ def without_files(settings: object) -> object:
     return settings
 
 
+def slope_parallel(insolation: NDArray[np.int16], slope: NDArray[np.int16]) -> NDArray[np.int16]:
+    """Stored insolation per unit of map area to that per unit of the inclined surface: times the cosine of the slope."""
+    fill = stored_fill("insolation")
+    tangent, _, _ = slope_tables()
+    cosine = 1.0 / np.sqrt(1.0 + tangent.astype(np.float64) ** 2)
+    along = np.floor(insolation * cosine[np.clip(slope, 0, len(tangent) - 1)] + 0.5)
+    return np.where(insolation == fill, fill, along).astype(np.int16)
+
+
 def insolation_facts(settings: Insolation) -> list[object]:
     """What the insolation numbers depend on beside the albedo, the elevation, the weather and the place."""
     return [
-        without_files(settings.model_dump(mode="json", exclude={"relative_uncertainty", "local_uncertainty"})),
+        without_files(
+            settings.model_dump(mode="json", exclude={"relative_uncertainty", "local_uncertainty", "slope_parallel"})
+        ),
         list(map(float, atmosphere(settings.atmosphere).numbers())),
         sun.solar_constant_wm2(),
         [LOWEST_M, HIGHEST_M, LEVEL_STEP_M, ORDERS, LATTICE_SPACING_M, DIRECTIONS, AROUND_M, PATH_HEIGHTS],
