@@ -253,7 +253,8 @@ class Planner:
         stats = {path: os.stat(path) for path in sorted(paths)}
         job = TileJob(
             store=self.store, tile=tile, day=day, grid=self.ground.grids[tile], scenes=scenes, numbers=numbers,
-            ground=ground, workflow=self.workflow, weather_key=weather.key, keys=keys, stale=tuple(stale), kept=kept,
+            ground=ground, workflow=self.workflow, weather_keys=(weather.sky_key, weather.air_key), keys=keys,
+            stale=tuple(stale), kept=kept,
             inputs=tuple((path, s.st_size, s.st_mtime_ns) for path, s in stats.items()),
         )  # fmt: skip
         return Decision(tile, day, "make", "; ".join(reasons), job, tuple(touched))
@@ -277,7 +278,7 @@ class Planner:
         facts: dict[str, object] = {name: [one.facts()[name] for one in numbers] for name in numbers[0].facts()}
         # an albedo of the day goes with its light
         of_the_day = workflow.albedo.day == "sun path"
-        facts["carried"] = [insolation_facts(workflow.insolation), weather.key, carried_share()] if of_the_day else []
+        facts["carried"] = [insolation_facts(workflow.insolation), weather.sky_key, carried_share()] if of_the_day else []
         level = workflow.albedo.illumination != "none"
         facts["level"] = [workflow.albedo.illumination, workflow.albedo.illumination_over_snow, ground.relief_key,
                           ground.land_cover_id] if level else []  # fmt: skip
@@ -290,7 +291,7 @@ class Planner:
         by_cover = longwave is not None and bool(emissivities(longwave, classes)[1])
         inputs: dict[str, object] = {
             "reflectance": contents, "sun": place, "ground": place, "strata": strata_key,
-            "elevation": ground.elevation_id, "weather": weather.key,
+            "elevation": ground.elevation_id, "weather": weather.sky_key, "air": weather.air_key,
             "terrain": ground.relief_key if workflow.insolation.terrain else "",
             "covers": ground.land_cover_id if by_cover else "",
         }  # fmt: skip

@@ -43,7 +43,7 @@ class TileJob:
     Attributes
     ----------
     scenes : opened scenes, the preferred one first, and the albedo numbers of each.
-    weather_key : of the weather that the keys were made with.
+    weather_keys : of the weather that the keys were made with.
     keys : key of every product; `stale` are those to be made.
     inputs : (path, size, mtime_ns) of every input when the plan was made.
     """
@@ -56,7 +56,7 @@ class TileJob:
     numbers: tuple[AlbedoNumbers, ...]
     ground: TileGround
     workflow: Workflow
-    weather_key: str
+    weather_keys: tuple[str, str]
     keys: dict[str, str]
     stale: tuple[str, ...]
     kept: tuple[Product, ...]
@@ -153,7 +153,7 @@ def day_light(job: TileJob) -> chain.Light:
     settings, lattice = job.workflow.insolation, lattice_positions(job.grid)
     times = tuple(scene.datetime.timestamp() for scene in job.scenes)
     weather = day_weather(job.workflow, job.day, *lattice)
-    if weather.key != job.weather_key:
+    if (weather.sky_key, weather.air_key) != job.weather_keys:
         raise InputProblem(
             str(job.workflow.file), f"weather of {job.day}", "changed while it was read", "files that are complete",
             "run the night again",

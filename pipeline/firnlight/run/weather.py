@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import datetime as dt
-from collections.abc import Callable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass, replace
 from functools import lru_cache
 from pathlib import Path
@@ -36,13 +36,21 @@ _WHOLE_DAY = np.array([[0.0, 24.0]])
 
 @dataclass(frozen=True, eq=False)
 class Weather:
-    """A day's weather at the lattice nodes of a tile; `key` tells its numbers, `gaps` what the files lack."""
+    """A day's weather at the lattice nodes of a tile.
+
+    Attributes
+    ----------
+    sky, air : for insolation and for longwave; `sky_key` and `air_key` tell their numbers.
+    gaps : what the files lack.
+    cells : of a supplied grid that is to be spread over slopes.
+    """
 
     sky: SkyInputs
     air: Air | None
-    key: str
+    sky_key: str
+    air_key: str
     gaps: tuple[str, ...] = ()
-    cells: SourceCells | None = None  # of a supplied grid that is to be spread over slopes
+    cells: SourceCells | None = None
 
 
 class _Reader:
@@ -68,7 +76,7 @@ class _Reader:
         if path.exists():
             return path
         if named != written:
-            self.gaps.append(f"no file {path.name}")
+            self.gaps.append(f"no file {path.name}; what needs it stays empty")
             return None
         raise SettingsProblem(
             str(self.workflow.file), "weather file", f"no file {path}", "a file of grids", "correct the path"
@@ -82,7 +90,7 @@ class _Reader:
         try:
             return _read_day(path, _stamp(path), variable, self.day, quantity, self.box, file)
         except DayMissing as problem:
-            self.gaps.append(f"{path.name}: {problem.found}")
+            self.gaps.append(f"{path.name}: {problem.found}; what needs it stays empty")
             return None
 
     def at_nodes(self, field: DayField | None) -> tuple[Floats, Floats]:
@@ -91,7 +99,7 @@ class _Reader:
             return _WHOLE_DAY, np.full((1, self.lon.size), np.nan)
         values = field_at(field, self.lon, self.lat)
         if np.isnan(values).any():
-            self.gaps.append(f"{field.name}: gaps on {self.day}")
+            self.gaps.append(f"{field.name} has gaps; what needs it stays empty")
         return field.edges_h, values
 
     def static(self, file: GridFile, variable: str | None, quantity: str) -> Floats:
@@ -162,7 +170,7 @@ def day_weather(workflow: Workflow, day: dt.date, longitude_deg: Lattice, latitu
     InputProblem : a file cannot be read or understood. SettingsProblem : a file is not there.
     """
     if not needs_weather(workflow):
-        return Weather(SkyInputs(), None, "")
+        return Weather(SkyInputs(), None, "", "")
     reader = _Reader(workflow, day, longitude_deg, latitude_deg)
     air, numbers = _atmosphere(reader)
     settings = workflow.insolation
@@ -186,7 +194,8 @@ def day_weather(workflow: Workflow, day: dt.date, longitude_deg: Lattice, latitu
         supplied = replace(supplied, by_height=height is not None)
     sky = SkyInputs(numbers, cloud, supplied)
     night = _air(reader, workflow.longwave.source) if workflow.longwave is not None else None
-    return Weather(sky, night, _key(sky, night, cells), tuple(dict.fromkeys(reader.gaps)), cells)
+    gaps = tuple(dict.fromkeys(reader.gaps))
+    return Weather(sky, night, _sky_key(sky, cells), "" if night is None else _digest(vars(night).values()), gaps, cells)
 
 
 def _cells(field: DayField, lon: Lattice, lat: Lattice) -> SourceCells:
@@ -224,7 +233,7 @@ def _from_station(reader: _Reader, name: str, air: Atmosphere) -> ClearIndex:
     series = _station_series(path, _stamp(path), station.sw_down, station.label, station.time, station.utc_offset_h)
     one = series.day(reader.day)
     if np.isnan(one.values).any():
-        reader.gaps.append(f"station {name}: gaps on {reader.day}")
+        reader.gaps.append(f"station {name} has gaps; what needs it stays empty")
     lat, lon, height = (np.array([v]) for v in (station.latitude, station.longitude, station.elevation_m))
     found = clear_sky_index(reader.day, one.edges_h, np.maximum(one.values, 0)[:, np.newaxis], lat, lon, height, air)
     return replace(found, index=np.repeat(found.index, reader.lon.size, axis=1))
@@ -264,9 +273,7 @@ def _air(reader: _Reader, grid: WeatherGrid) -> Air:
     )  # fmt: skip
 
 
-def _key(sky: SkyInputs, air: Air | None, cells: SourceCells | None) -> str:
-    """A digest of all numbers read."""
-    digest = xxhash.xxh3_128()
+def _sky_key(sky: SkyInputs, cells: SourceCells | None) -> str:
     parts: list[Any] = [*(sky.air or ())]
     if sky.cloud is not None:
         parts += [sky.cloud.hours, sky.cloud.fraction]
@@ -274,9 +281,14 @@ def _key(sky: SkyInputs, air: Air | None, cells: SourceCells | None) -> str:
         parts += [sky.supplied.edges_h, sky.supplied.index, np.array(sky.supplied.by_height)]
     if cells is not None:
         parts += [cells.x.values, cells.y.values, cells.edges_x, cells.edges_y, cells.wm2]
-    if air is not None:
-        parts += [value for value in vars(air).values() if value is not None]
-    for part in parts:
-        digest.update(str(part.shape).encode())
-        digest.update(np.ascontiguousarray(part).tobytes())
+    return _digest(parts) if parts else ""
+
+
+def _digest(arrays: Iterable[Any]) -> str:
+    """A digest of all numbers."""
+    digest = xxhash.xxh3_128()
+    for one in arrays:
+        if one is not None:
+            digest.update(str(one.shape).encode())
+            digest.update(np.ascontiguousarray(one).tobytes())
     return digest.hexdigest()

@@ -22,7 +22,7 @@ from firnlight.stages.insolation import HIGHEST_M, LEVEL_STEP_M, LOWEST_M, Relie
 from firnlight.stages.stage import Stage
 
 LONGWAVE = Stage(
-    "net longwave", 1, ("albedo", "quality", "insolation", "elevation", "ground", "terrain", "covers", "weather"),
+    "net longwave", 1, ("albedo", "quality", "insolation", "elevation", "ground", "terrain", "covers", "air"),
     ("net_longwave",), ("longwave",),
 )  # fmt: skip
 NET = Stage("net radiation", 1, ("absorbed_shortwave", "net_longwave"), ("net_radiation",), ())

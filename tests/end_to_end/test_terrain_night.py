@@ -1,0 +1,242 @@
+"""Terrain, weather and net radiation through the whole way: closure, gaps, redo, sources of insolation."""
+
+import csv
+import datetime as dt
+import json
+
+import numpy as np
+import pytest
+import rasterio
+import xarray as xr
+
+GAP = -32768
+
+
+def cells(path):
+    with rasterio.open(path) as dataset:
+        return dataset.read(1)
+
+
+def days(area):
+    return sorted((area.store / "maps").glob("*/*"))
+
+
+def rows(area, *arguments):
+    code, out, err = area.run("budget", "--json", "--quiet", *arguments)
+    assert code == 0, err
+    return json.loads(out)["rows"]
+
+
+def number(value):
+    return np.nan if value is None else value
+
+
+def test_net_radiation_closes_in_every_cell_and_row(done_area):
+    for day in days(done_area):
+        absorbed, longwave, net = (
+            cells(day / f"{name}.tif").astype(int) for name in ("absorbed_shortwave", "net_longwave", "net_radiation")
+        )
+        known = net != GAP
+        assert known.any()
+        assert (net[known] == absorbed[known] + longwave[known]).all()
+        assert ((longwave == GAP) == (net == GAP)).all()
+        assert (net[absorbed == GAP] == GAP).all()
+    day = days(done_area)[0].name
+    found = rows(done_area, "--since", day, "--until", day, "--by", "region,elevation_band,land_cover,snow")
+    with_net = [row for row in found if row["net_radiation_wm2"] is not None]
+    assert with_net
+    for row in with_net:
+        assert row["net_radiation_wm2"] == pytest.approx(row["absorbed_wm2"] + row["net_longwave_wm2"], abs=1e-9)
+        assert row["insolation_wm2"] == pytest.approx(row["reflected_wm2"] + row["absorbed_wm2"], abs=1e-9)
+        assert 0 <= row["terrain_light_wm2"] < row["insolation_wm2"]
+        assert row["net_radiation_u"] > row["absorbed_u"] > 0
+        assert (row["melt_potential_mm_day"] is not None) == (row["snow"] == "snow")
+    assert {row["snow"] for row in with_net} == {"snow", "snow-free"}
+
+
+def test_slopes_get_what_they_face(done_area):
+    """Common practice, no source: in March a slope gets the more, the more it leans to the south."""
+    day = days(done_area)[0]
+    relief = done_area.store / "terrain" / day.parent.name
+    slope, aspect = cells(relief / "slope.tif") * 0.01, cells(relief / "aspect.tif") * 0.02
+    light = cells(day / "insolation.tif")
+    known = light != GAP
+    southward = np.tan(np.radians(slope[known])) * -np.cos(np.radians(aspect[known]))
+    assert np.corrcoef(southward, light[known])[0, 1] > 0.8
+    view = cells(relief / "sky_view.tif")
+    assert ((view >= 0) & (view <= 10000)).all()
+    assert (cells(day / "terrain_light.tif")[light != GAP] <= light[light != GAP]).all()
+
+
+def without_day(area, day):
+    path = area.folder / "weather.nc"
+    with xr.open_dataset(path) as data:
+        kept = data.sel(time=[t for t in data.time.values if str(t)[:10] != day]).load()
+    path.unlink()
+    kept.to_netcdf(path, engine="h5netcdf")
+
+
+def test_missing_weather_is_a_gap_that_is_told_and_filled_when_it_comes(area):
+    whole = (area.folder / "weather.nc").read_bytes()
+    day = area.items()[0].stem.split("_")[1]
+    day = f"{day[:4]}-{day[4:6]}-{day[6:]}"
+    without_day(area, day)
+    code, _, err = area.run("night")
+    assert code == 0
+    assert "air_temperature has gaps" in err
+    assert day in err
+    for folder in days(area):
+        gap = (cells(folder / "net_radiation.tif") == GAP).all()
+        assert gap == (folder.name == day)
+        assert (cells(folder / "absorbed_shortwave.tif") != GAP).any()
+    gone = rows(area, "--since", day, "--until", day, "--by", "region")
+    assert all(row["net_radiation_wm2"] is None and row["net_longwave_wm2"] is None for row in gone)
+    assert any(row["absorbed_wm2"] is not None for row in gone)
+    (area.folder / "weather.nc").write_bytes(whole)
+    before = area.times()
+    assert area.night("--quiet") == 0
+    touched = area.touched_since(before)
+    assert touched
+    assert all(day in name for name in touched)
+    assert not any("albedo" in name or "insolation" in name for name in touched)
+
+
+def test_relief_is_made_once_and_again_when_it_is_gone(done_area):
+    before, files = done_area.times(), done_area.files()
+    assert done_area.night("--quiet") == 0
+    assert done_area.touched_since(before) == set()
+    (done_area.store / "terrain/FELL-A/horizon.tif").unlink()
+    next((done_area.store / "maps/FELL-A").rglob("insolation.tif")).unlink()
+    assert done_area.night("--quiet") == 0
+    assert done_area.files() == files
+
+
+def test_flat_ground_on_request_and_back_again(done_area):
+    files = done_area.files()
+    done_area.edit("terrain = true", "terrain = false")
+    assert done_area.night("--quiet") == 0
+    day = days(done_area)[0]
+    item = json.loads((day / "scene.json").read_text(encoding="utf-8"))
+    assert "terrain_light" not in item["assets"]
+    assert rows(done_area, "--by", "region")[0]["terrain_light_wm2"] in (0, None)
+    done_area.edit("terrain = false", "terrain = true")
+    assert done_area.night("--quiet") == 0
+    assert done_area.files() == files
+
+
+SOURCES = {
+    "grid": 'source = { grid = "insolation.nc", elevation = { grid = "weather.nc", variable = "surface_altitude" } }',
+    "cloud": 'source = "clear-sky"\ncloud = { grid = "weather.nc", variable = "cloud_fraction" }',
+    "station": 'source = { station = "high_camp" }',
+}
+
+
+def with_source(area, kind):
+    area.edit('source = "clear-sky"', SOURCES[kind])
+    about = json.loads((area.folder / "truth/about.json").read_text(encoding="utf-8"))["stations"]["high_camp"]
+    text = "\n".join(f"{name} = {value}" for name, value in about.items())
+    area.edit("[uncertainty]", f'[stations.high_camp]\nfile = "stations/high_camp.csv"\n{text}\n\n[uncertainty]')
+
+
+@pytest.mark.parametrize("kind", SOURCES)
+def test_cloudy_sources_dim_the_light_and_close(area, done_area_light, kind):
+    with_source(area, kind)
+    assert area.night("--quiet") == 0
+    for day in days(area):
+        light = cells(day / "insolation.tif")
+        clear = done_area_light[f"{day.parent.name} {day.name}"]
+        known = (light != GAP) & (clear != GAP)
+        assert known.any()
+        assert 0.2 < light[known].mean() / clear[known].mean() < 1.1
+    with_net = [row for row in rows(area, "--by", "region") if row["net_radiation_wm2"] is not None]
+    assert all(row["net_radiation_wm2"] == pytest.approx(row["absorbed_wm2"] + row["net_longwave_wm2"]) for row in with_net)
+
+
+@pytest.fixture
+def done_area_light(made_area, tmp_path, capsys):
+    import shutil
+
+    from end_to_end.conftest import Area
+
+    shutil.copytree(made_area, tmp_path / "clear")
+    clear = Area(tmp_path / "clear", capsys)
+    assert clear.night("--quiet") == 0
+    return {f"{day.parent.name} {day.name}": cells(day / "insolation.tif") for day in days(clear)}
+
+
+def test_a_supplied_grid_keeps_its_mean_on_slopes(area):
+    """Every cell of the tile under one cell of a coarse grid: the mean over the ground is the supplied value."""
+    value = 180.0
+    times = np.array([np.datetime64(f"{item.stem[7:11]}-{item.stem[11:13]}-{item.stem[13:15]}") for item in area.items()])
+    day_starts = np.unique(times)
+    hours = (day_starts[:, None] + np.arange(24).astype("timedelta64[h]")).ravel()
+    noon = np.maximum(np.cos((np.arange(24) + 0.5 - 14.4) / 24 * 2 * np.pi), 0)
+    course = np.tile(noon / noon.mean() * value, day_starts.size)
+    data = xr.Dataset(
+        {"light": (("time", "lat", "lon"), np.broadcast_to(course[:, None, None], (hours.size, 2, 2)).copy())},
+        {"time": hours, "lat": [46.0, 47.0], "lon": [-37.0, -35.0]},
+    )
+    data.light.attrs.update(units="W m-2", cell_methods="time: mean")
+    data.lat.attrs.update(units="degrees_north", standard_name="latitude")
+    data.lon.attrs.update(units="degrees_east", standard_name="longitude")
+    data.to_netcdf(area.folder / "coarse.nc", engine="h5netcdf")
+    area.edit('source = "clear-sky"', 'source = { grid = "coarse.nc", variable = "light", label = "start" }')
+    # without cloud every cell is seen, so the maps hold all ground
+    for item in area.items():
+        quality = item.parent / "quality.tif"
+        with rasterio.open(quality, "r+") as dataset:
+            dataset.write(np.zeros(dataset.shape, np.uint8), 1)
+        body = json.loads(item.read_text(encoding="utf-8"))
+        body["assets"]["quality"].pop("file:checksum", None)
+        item.write_text(json.dumps(body), encoding="utf-8")
+    assert area.night("--quiet") == 0
+    for day in days(area):
+        light = cells(day / "insolation.tif").astype(float)
+        light[light == GAP] = np.nan
+        if np.isnan(light).mean() > 0.02:  # a swath that missed part of the tile
+            continue
+        assert np.nanmean(light) * 0.1 == pytest.approx(value, rel=0.02)
+        assert np.nanstd(light) * 0.1 > 5
+
+
+def test_a_day_of_polar_night_is_zero_light_not_a_gap(area):
+    """The same ground carried to 83 N in December: no sun, no light; longwave goes on."""
+    scenes = area.items()
+    for item in scenes:
+        body = json.loads(item.read_text(encoding="utf-8"))
+        when = dt.datetime.fromisoformat(body["properties"]["datetime"])
+        body["properties"]["datetime"] = when.replace(month=12, day=20).isoformat().replace("+00:00", "Z")
+        item.write_text(json.dumps(body), encoding="utf-8")
+    code, _, err = area.run("night")
+    # the sun stood too low for any albedo at the scene's hour, or the same tile-day holds both scenes: no number is made up
+    assert code in (0, 3), err
+    for day in days(area):
+        light = cells(day / "insolation.tif")
+        assert (light[light != GAP] >= 0).all()
+
+
+def test_a_station_table_has_units_in_its_names(area):
+    with (area.folder / "stations/high_camp.csv").open(encoding="utf-8") as stream:
+        assert "sw_down_wm2" in next(csv.reader(stream))
+    with_source(area, "station")
+    area.edit('file = "stations/high_camp.csv"', 'file = "stations/nowhere.csv"')
+    code, _, err = area.run("night")
+    assert code == 2
+    assert "nowhere.csv" in err
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "said"),
+    [
+        ('air_temperature = "air_temperature"', 'air_temperature = "air_temp"', "air_temperature"),
+        ('grid = "weather.nc"', 'grid = "wether.nc"', "wether.nc"),
+        ('method = "brutsaert1975"', 'method = "brutsaert"', "brutsaert1975"),
+    ],
+)
+def test_wrong_weather_settings_are_said(area, old, new, said):
+    area.edit(old, new)
+    code, _, err = area.run("night")
+    assert code in (2, 3)
+    assert said in err
+    assert "Traceback" not in err
+    assert not list(area.store.rglob("net_radiation.tif"))
