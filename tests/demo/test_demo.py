@@ -14,14 +14,16 @@ from hypothesis.extra.numpy import arrays
 from pyproj import Transformer
 
 from firnlight.core.tables import load_table
-from firnlight.demo import layout, sky
+from firnlight.demo import layout, sky, slopes
 from firnlight.demo.area import write_demo
 from firnlight.demo.noise import row_noise, smoothstep, value_noise
-from firnlight.demo.plane import to_plane
+from firnlight.demo.plane import TilePlane, to_plane
 from firnlight.demo.scenes import Overpass, write_tile
+from firnlight.demo.slopes import LARGEST_CELLS
 from firnlight.demo.spectra import BANDS, SURFACES, endmembers
 from firnlight.demo.terrain import CLASSES, ground_at
 from firnlight.demo.truth import air
+from firnlight.demo.weather import Climate
 from firnlight.physics.clearsky import day_mean_insolation, day_moments
 
 PROJECT = Path(__file__).resolve().parents[2]
@@ -41,6 +43,11 @@ def contents(folder):
 def overpasses(area, scenes, seed, years=1):
     around = layout.extent(area)
     return [Overpass(n, sky.overpass(t, seed), around) for n, t in enumerate(layout.overpasses(scenes, years))]
+
+
+def climate(area, scenes, seed):
+    around = layout.extent(area)
+    return Climate.of(seed, [sky.overpass(t, seed) for t in layout.overpasses(scenes, 1)], around)
 
 
 def scenes_of(folder):
@@ -63,7 +70,7 @@ def cover(folder, scene):
 def test_the_size_of_strips_changes_no_byte(tmp_path, size, strip_rows):
     area = layout.tiles(2, size)
     for name, rows in (("whole", None), ("cut", strip_rows)):
-        write_tile(tmp_path / name, area[1], overpasses(area, 2, 3)[1:], strip_rows=rows)
+        write_tile(tmp_path / name, area[1], overpasses(area, 2, 3)[1:], climate(area, 2, 3), strip_rows=rows)
     assert contents(tmp_path / "cut") == contents(tmp_path / "whole")
 
 
@@ -81,8 +88,8 @@ def test_the_same_seed_gives_the_same_bytes_and_another_other_skies_over_the_sam
 def test_a_tile_is_not_changed_by_how_many_overpasses_it_has(tmp_path):
     area = layout.tiles(1, 40)
     times = overpasses(area, 3, 9)
-    write_tile(tmp_path / "all", area[0], times)
-    write_tile(tmp_path / "last", area[0], times[2:])
+    write_tile(tmp_path / "all", area[0], times, climate(area, 3, 9))
+    write_tile(tmp_path / "last", area[0], times[2:], climate(area, 3, 9))
     every = contents(tmp_path / "all")
     for name, data in contents(tmp_path / "last").items():
         assert every[name] == data
@@ -177,7 +184,9 @@ def test_two_tiles_see_the_same_ground(made):
     # bilinear reading of ground that bends over 150 m: about 1 m; covers and snow edges are sharper
     assert np.percentile(differences("static/FELL-{}/elevation.tif"), 99) < 2.5
     for day in ("20310310", "20310514", "20310718"):
-        assert np.percentile(differences(f"truth/FELL-{{}}_{day}/insolation.tif"), 90) < 8
+        assert (
+            np.percentile(differences(f"truth/FELL-{{}}_{day}/insolation.tif"), 75) < 80
+        )  # steps of 0.1: slopes bend between cells
         assert np.percentile(differences(f"truth/FELL-{{}}_{day}/albedo.tif"), 75) < 150
 
 
@@ -219,15 +228,18 @@ def test_spectra_are_reflectances_and_the_published_conversion_nearly_fits_them(
 
 def test_the_truth_is_recovered_from_clear_cells(made):
     form = load_table("broadband").row("liang2001")
+    calibration = json.loads((made / "truth/about.json").read_text())["relative_calibration_error"]
     every = []
     for scene in scenes_of(made):
         bands = reflectance(made, scene)
-        got = sum(w * bands[b] for b, w in form["weights"].items()) + form["intercept"]
+        got = sum(w * bands[b] for b, w in form["weights"].items()) / (1 + calibration) + form["intercept"]
         clear = (read(made / f"truth/{scene}/cloud.tif") & 3 == 0) & (read(made / f"scenes/{scene}/nir.tif") > 0)
         error = (got - read(made / f"truth/{scene}/albedo.tif") * 1e-4)[clear]
-        assert abs(error.mean()) <= 0.01
-        assert np.sqrt((error**2).mean()) <= 0.02
+        # half a tile holds few patches of the 0.022 that six bands cannot tell
+        assert abs(error.mean()) <= 0.03
+        assert np.sqrt((error**2).mean()) <= 0.035
         every.append(error)
+    assert abs(np.concatenate(every).mean()) <= 0.015
     assert np.concatenate(every).std() > 0.003  # noise, calibration and slopes are in it
 
 
@@ -260,24 +272,58 @@ def test_the_snowline_rises_and_snow_darkens_through_the_season(made):
     assert bright[0] - 200 > bright[1] > bright[2] + 200  # steps of 0.0001
 
 
-def test_insolation_is_the_clear_sky_model_and_absorption_closes(made):
-    rng = np.random.default_rng(1)
+def test_level_lakes_get_the_clear_sky_and_slopes_what_they_face(made):
     for scene in scenes_of(made):
-        albedo, incoming, absorbed = (
-            read(made / f"truth/{scene}/{name}.tif").astype(np.int64)
-            for name in ("albedo", "insolation", "absorbed_shortwave")
-        )
-        assert (absorbed == (incoming * (10_000 - albedo) + 5_000) // 10_000).all()
+        incoming = read(made / f"truth/{scene}/insolation.tif") * 0.1
         with rasterio.open(made / f"static/{scene[:6]}/elevation.tif") as dataset:
-            height, transform, crs = dataset.read(1), dataset.transform, dataset.crs
+            height, transform, crs = dataset.read(1).astype(float), dataset.transform, dataset.crs
         day = dt.date.fromisoformat(scene[-8:])
-        for row, col in rng.integers(0, 192, (6, 2)):
-            x, y = rasterio.transform.xy(transform, row, col)
-            lon, lat = Transformer.from_crs(crs, 4326, always_xy=True).transform(x, y)
-            moments = day_moments(day, np.array([lat]), np.array([lon]), np.array([float(height[row, col])]), air(), 8)
-            wanted = day_mean_insolation(moments[0, 0], albedo[row, col] * 1e-4)
-            # half a stored step, and what the fit and the heights' eighths of a metre leave
-            assert incoming[row, col] * 0.1 == pytest.approx(float(wanted), abs=0.05 + 0.03)
+        x, y = rasterio.transform.xy(transform, 96, 96)
+        lon, lat = Transformer.from_crs(crs, 4326, always_xy=True).transform(x, y)
+        moments = day_moments(day, np.array([lat]), np.array([lon]), np.array([800.0, 2000.0]), air(), 8)
+        low, high = (float(day_mean_insolation(moments[0, n], 0.3)) for n in range(2))
+        lake = cover(made, scene) == CODES["lake"]
+        if lake.sum() > 200:  # walls around take some sky and give some light; 4 standard deviations of the sky's error
+            assert np.median(incoming[lake]) == pytest.approx(low, rel=0.13)
+        assert 0.7 * low < incoming.mean() < 1.4 * high
+        south = np.gradient(height, 30.0)[0] * -1  # rows go south: ground that falls that way faces the sun
+        inner = ~lake
+        assert np.corrcoef(south[inner], incoming[inner])[0, 1] > 0.25
+
+
+def test_net_longwave_is_a_loss_of_the_size_of_clear_and_cloudy_skies(made):
+    """Common practice, no source: snow and ground lose between nothing and 150 W m-2 to the sky over a day."""
+    for scene in scenes_of(made):
+        lost = read(made / f"truth/{scene}/net_longwave.tif") * 0.1
+        assert lost.min() > -170
+        assert lost.max() < 40
+        assert lost.mean() < -20
+
+
+def test_slopes_of_large_tiles_are_not_followed(tmp_path):
+    area = layout.tiles(1, LARGEST_CELLS + 18)
+    write_tile(tmp_path, area[0], overpasses(area, 1, 3), climate(area, 1, 3))
+    names = {path.name for path in (tmp_path / "truth").rglob("*.tif")}
+    assert names == {"albedo.tif", "cloud.tif"}
+
+
+def test_a_march_sees_a_wall_where_it_stands(monkeypatch):
+    """A plain with a wall 300 m high, 1.5 km to the east: 11.3 deg there, nothing to the west, a smaller view of the sky."""
+    plane = TilePlane(layout.tiles(1, 32)[0].grid)
+    x0 = float(plane.at(np.arange(16, 17), np.arange(16, 17))[0][0, 0])
+
+    def height(x_m, y_m):
+        return np.where(np.abs(x_m - x0 - 1500) < 60, np.float32(1300), np.float32(1000)) + np.float32(0) * y_m
+
+    monkeypatch.setattr(slopes.terrain, "elevation_m", height)
+    level = np.zeros((32, 32), np.float32)
+    ground = type("Ground", (), {"x_m": level, "y_m": level, "elevation_m": level + 1000, "east": level, "north": level})
+    monkeypatch.setattr(slopes.terrain, "ground_rows", lambda *_: ground)
+    found = slopes.slopes_of(plane)
+    east, west = found.horizon[slopes.AZIMUTHS // 4, 16, 16], found.horizon[3 * slopes.AZIMUTHS // 4, 16, 16]
+    assert np.degrees(east) == pytest.approx(np.degrees(np.arctan(300 / 1450)), abs=0.7)
+    assert west == 0
+    assert 0.97 < found.view[16, 16] < 0.995
 
 
 def test_the_mask_is_the_truth_with_the_planted_mistakes(made):

@@ -50,22 +50,45 @@ def clear(item):
         return dataset.read(1) == 0
 
 
-@pytest.mark.parametrize("item", scenes(), ids=lambda item: item.stem)
-def test_truth_is_recovered_where_the_sky_is_clear(night, item):
-    for name, bias, rmse in (("albedo", 0.01, 0.02), ("insolation", 0.5, 1.5), ("absorbed_shortwave", 3.0, 8.0)):
-        error = (cells(night, item, name) - truth(item, name))[clear(item)]
-        assert np.isfinite(error).any()
-        assert abs(np.nanmean(error)) <= bias, name
-        assert np.sqrt(np.nanmean(error**2)) <= rmse, name
+def true_values(item, name):
+    """Truth of a layer; absorbed and net follow from what the truth holds."""
+    if name == "absorbed_shortwave":
+        return truth(item, "insolation") * (1 - truth(item, "albedo"))
+    if name == "net_radiation":
+        return true_values(item, "absorbed_shortwave") + truth(item, "net_longwave")
+    return truth(item, name)
 
 
-def test_the_stated_uncertainty_of_albedo_holds_the_truth(night):
-    inside, count = 0, 0
+def compared(night, name, items=None):
+    """Error, stated standard uncertainty and truth of all clear cells that were seen."""
+    parts = []
+    for item in items or scenes():
+        error = cells(night, item, name) - true_values(item, name)
+        u = cells(night, item, f"{name}_u") if name != "insolation" else np.full(error.shape, np.nan)
+        known = clear(item) & np.isfinite(error)
+        parts.append((error[known], u[known], true_values(item, name)[known]))
+    return (np.concatenate(one) for one in zip(*parts, strict=True))
+
+
+@pytest.mark.parametrize("name", ["albedo", "absorbed_shortwave", "net_radiation"])
+def test_truth_is_recovered_and_the_stated_uncertainty_holds_it(night, name):
+    """Slopes included. The truth errs by draws in the sizes that the workflow states, so one sigma should hold 68 %; a few
+    draws are shared by many cells, which is what the margins are for."""
+    error, u, true = compared(night, name)
+    assert error.size > 200_000
+    assert abs(error.mean()) <= 0.02 * abs(true.mean())
+    assert np.sqrt((error**2).mean()) <= 1.2 * u.mean()
+    share = (np.abs(error) <= u).mean()
+    assert 0.63 <= share <= (0.75 if name == "albedo" else 0.73)
+
+
+def test_insolation_of_each_scene_comes_near_the_truth_on_slopes(night):
+    """The sky's own errors are 3 % here and there and 1 % for a day: the rest is ours."""
     for item in scenes():
-        error = np.abs(cells(night, item, "albedo") - truth(item, "albedo"))
-        within = (error <= 2 * cells(night, item, "albedo_u"))[clear(item) & np.isfinite(error)]
-        inside, count = inside + within.sum(), count + within.size
-    assert inside / count >= 0.95
+        error, _, true = compared(night, "insolation", [item])
+        assert abs(error.mean()) <= 0.03 * true.mean()
+        assert error.std() <= 0.05 * true.mean()
+        assert true.std() > 0.03 * true.mean()  # there are slopes in it
 
 
 def test_order_of_surfaces(night):
@@ -101,4 +124,4 @@ def test_overlapping_tiles_of_two_zones_count_ground_once(night):
 
 
 def test_the_sample_is_small():
-    assert sum(path.stat().st_size for path in SAMPLE.rglob("*") if path.is_file()) < 6e6
+    assert sum(path.stat().st_size for path in SAMPLE.rglob("*") if path.is_file()) < 5e6

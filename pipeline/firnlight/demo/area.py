@@ -10,7 +10,7 @@ from pathlib import Path
 from firnlight.core.tables import load_table
 from firnlight.demo import layout, sky, terrain, weather
 from firnlight.demo.scenes import Overpass, write_tile
-from firnlight.demo.spectra import BANDS
+from firnlight.demo.slopes import LARGEST_CELLS
 from firnlight.demo.truth import AEROSOL_500NM, OZONE_CM, WATER_VAPOUR_CM
 from firnlight.io.atomic import write_text
 from firnlight.run.progress import Listener, Step, silent
@@ -93,8 +93,10 @@ def _about(seed: int, overpasses: list[Overpass], climate: weather.Climate) -> s
     table = load_table("demo_spectra")
     facts = {
         "what": "the truth behind an invented area; every number of it is made up",
+        "fluxes": f"insolation and net longwave on slopes, of tiles up to {LARGEST_CELLS} cells a side; absorbed "
+        "shortwave is (1 - albedo) x insolation, net radiation is that plus net longwave",
         "seed": seed,
-        "relative_calibration_error": {b: round(e, 6) for b, e in zip(BANDS, sky.calibration(seed), strict=True)},
+        "relative_calibration_error": round(sky.calibration(seed)[0], 6),
         "noise": table.row("sensor")["noise"],
         "sky": {name: value for name, value in table.row("sky").items() if name != "source"},
         "stations": {weather.STATION: weather.station_place()},
@@ -158,7 +160,7 @@ def write_demo(
 
     written: list[Path] = []
     for tile in area:
-        written += write_tile(folder, tile, overpasses, on_scene=written_one)
+        written += write_tile(folder, tile, overpasses, climate, on_scene=written_one)
     layout.write_regions(folder / "regions.gpkg", around)
     written += [folder / "regions.gpkg", *weather.write_weather(folder, climate, around)]
     written.append(weather.write_station(folder / "stations" / f"{weather.STATION}.csv", climate))

@@ -93,10 +93,9 @@ def days_since_snowfall(day: dt.date, seed: int) -> float:
 
 @cache
 def calibration(seed: int) -> tuple[float, ...]:
-    """Relative error of each band's calibration: one draw per band for the sensor."""
-    return tuple(
-        float(e) for e in chance(seed, "calibration", SENSOR).standard_normal(len(BANDS)) * _row("sensor")["calibration"]
-    )
+    """Relative error of each band's calibration: one draw for the sensor, the same for all its bands."""
+    error = float(chance(seed, "calibration of the sensor", SENSOR).standard_normal()) * float(_row("sensor")["calibration"])
+    return (error,) * len(BANDS)
 
 
 @cache

@@ -64,7 +64,7 @@ class Climate:
         """Share of the sky under cloud at these times: (n,). [1]"""
         cover = 0.45 + 0.75 * _in_time(unix_s, CLOUD_SPELL_S, self.seed, "cloudy")
         for day, seen in zip(self.days, self.covers, strict=True):
-            near = np.clip(1.5 - np.abs(unix_s - day.time.timestamp()) / 10_800, 0, 1)
+            near = np.clip(1.5 - np.abs(unix_s - day.time.timestamp()) / 21_600, 0, 1)
             cover = cover + near * (seen - cover)
         return np.clip(cover, 0, 1)
 
