@@ -20,6 +20,7 @@ def main() -> None:
     for name, title in (
         ("albedo", "Albedo, tile FELL-B, 14 May 2031"),
         ("absorbed_shortwave", "Absorbed sunlight, mean of the day"),
+        ("net_radiation", "Net radiation, mean of the day"),
     ):
         with rasterio.open(DAY / f"{name}.tif") as dataset:
             panels.append(MapPanel(name, dataset.read(1), title))
