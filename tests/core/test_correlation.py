@@ -185,6 +185,19 @@ def test_blocks_summed_by_lag_equal_blocks_summed_by_pairs(monkeypatch):
     assert math.sqrt(found[0][1] / found[10**6][1]) == pytest.approx(1, abs=0.01)
 
 
+@pytest.mark.parametrize("lag", [(0, 1), (1, 0), (1, 1), (1, -1), (2, -3), (0, 3), (3, 0)])
+def test_near_blocks_take_the_places_of_their_own_cells(lag):
+    # 64 pairs of single cells far from each other, the two of a pair at the edges or corners where their blocks are
+    # nearest; so many blocks are summed by lag
+    first = np.indices((8, 8)).reshape(2, -1).T * 40 + 5
+    toward = 0.5 + 0.45 * np.sign(lag)
+    blocks, centres = np.concatenate([first, first + lag]), np.repeat([toward, 1 - toward], 64, axis=0)
+    assert len(blocks) > correlation.FEW
+    apart = math.hypot(*(lag + (1 - toward) - toward))
+    found = sum_variance(blocks, np.ones((128, 1)), centres, np.zeros(128), 1.0, 2.0)[0]
+    assert found == pytest.approx(128 * (1 + math.exp(-apart / 2)), rel=1e-4)
+
+
 @st.composite
 def regions(draw):
     """Blocks with signed sums of two errors, their centres and spreads."""

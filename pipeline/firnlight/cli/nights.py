@@ -161,6 +161,8 @@ def check(workflow: Path, as_json: bool, quiet: bool) -> int:
     if as_json:
         print_json(found.data())
     else:
+        for gap in found.gaps:
+            click.echo(f"Note: {gap}", err=True)
         for problem in found.problems:
             click.echo(f"Refused: {problem}", err=True)
         click.echo(found.sentence())

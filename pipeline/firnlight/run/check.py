@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import time
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -26,13 +26,14 @@ class Checked:
     tiles: int
     scenes: int
     problems: list[str]
+    gaps: list[str]  # what the weather files lack
 
     def sentence(self) -> str:
         state = "all good" if not self.problems else f"{len(self.problems)} problems"
         return f"Checked {self.scenes} scenes of {self.tiles} tiles: {state}. Nothing was written."
 
     def data(self) -> dict[str, object]:
-        return {"version": 1, "tiles": self.tiles, "scenes": self.scenes, "problems": self.problems}
+        return {"version": 1, "tiles": self.tiles, "scenes": self.scenes, "problems": self.problems, "gaps": self.gaps}
 
 
 def check_inputs(workflow: Workflow, tell: Listener) -> Checked:
@@ -73,10 +74,11 @@ def _check(planner: Planner, tell: Listener) -> Checked:
         for path in planner.ground.files(tile):
             try:
                 with open_raster(path) as dataset:
-                    for window in grid.windows(BLOCK_ROWS, BLOCK_COLS):
+                    size = replace(grid, rows=dataset.height, cols=dataset.width)  # the wider elevation has its own
+                    for window in size.windows(BLOCK_ROWS, BLOCK_COLS):
                         read_window(dataset, window)
             except InputProblem as problem:
                 problems.append(str(problem))
     problems += [refusal.reason for refusal in planner.refusals]
     problems = list(dict.fromkeys(problems))
-    return Checked(len(planner.ground.grids), count, problems)
+    return Checked(len(planner.ground.grids), count, problems, planner.gaps)

@@ -111,8 +111,9 @@ class Ground:
         return tuple(around), text_id(json.dumps(facts))
 
     def files(self, tile: str) -> list[str]:
-        """Elevation and land cover of a tile that are there."""
-        written = (self.workflow.surface.elevation, self.workflow.surface.land_cover)
+        """Elevation, of the tile and around it, and land cover that are there."""
+        surface = self.workflow.surface
+        written = (surface.elevation, surface.land_cover, surface.wider_elevation if self.workflow.needs_relief else None)
         paths = [self.workflow.tile_path(one, tile) for one in written if one is not None]
         return [str(path) for path in paths if path.is_file()]
 

@@ -126,9 +126,21 @@ def net_layers(
 
 
 def longwave_facts(settings: Longwave | None, classes: dict[int, str]) -> list[object]:
-    """What net longwave depends on beside the maps, the weather and the place."""
+    """What net longwave depends on beside the maps, the weather and the place.
+
+    Raises
+    ------
+    SettingsProblem : no form of that name.
+    """
     if settings is None:
         return []
+    forms = longwave.method("clear", settings.method), longwave.method("cloud", settings.cloud)
     values, places = emissivities(settings, classes)
     chosen = without_files(settings.model_dump(mode="json", exclude={"uncertainty_wm2", "local_uncertainty_wm2"}))
-    return [chosen, values.tolist(), sorted(places.items()), [LOWEST_M, HIGHEST_M, LEVEL_STEP_M]]
+    return [
+        chosen,
+        [form["numbers"] for form in forms],
+        values.tolist(),
+        sorted(places.items()),
+        [LOWEST_M, HIGHEST_M, LEVEL_STEP_M],
+    ]
