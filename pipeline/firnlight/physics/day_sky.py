@@ -13,12 +13,14 @@ from firnlight.core.tables import load_table
 from firnlight.physics import sun
 from firnlight.physics.clearsky import STEP_S, Atmosphere, ClearSky, bird, day_times_unix_s, pressure_pa
 from firnlight.physics.cloud import clouded_sky_albedo, transmission
+from firnlight.physics.day_steps import intervals, overlap_mean
 from firnlight.physics.diffuse import erbs
 from firnlight.physics.light import CODE_DEG, SunPaths
 
 Floats = NDArray[np.float64]
 NODE_S = 1800.0  # between the time nodes of a sun path
 _HOUR_S = 3600.0
+LEAST_CLEAR_WM2 = 20.0  # the sun at about 4 degrees; a cloudless mean below it measures no cloud; a choice made here
 
 
 @dataclass(frozen=True, eq=False)
@@ -87,7 +89,7 @@ def _clear(time: float, places: Places) -> tuple[ClearSky, Floats, Floats]:
 def _clouded(clear: ClearSky, fraction: Floats) -> Light:
     """Cloudless light dimmed and spread by cloud, over black ground: what cloud threw back to grass is taken out again."""
     row = load_table("clearsky").row("kasten_czeplak_1980")
-    c = fraction[:, np.newaxis]
+    c = np.where(clear.black_ground_wm2 > 0, fraction[:, np.newaxis], 0.0 * clear.black_ground_wm2)  # none is asked by night
     sky_albedo = np.where(clear.black_ground_wm2 > 0, clouded_sky_albedo(clear.sky_albedo, c), 0.0 * c)
     grass = row["ground_albedo"]
     whole = clear.black_ground_wm2 * transmission(c) * (1 - grass * sky_albedo) / (1 - grass * clear.sky_albedo)
@@ -124,21 +126,43 @@ def clear_sky_index(
 
     Returns
     -------
-    ClearIndex   0 where the sun is down for the whole interval, whatever the series says of it.
+    ClearIndex   0 where the sun is down for the whole interval, whatever the series says of it. Of intervals that cut a
+    time step of the day, one value per step. An interval with hardly any sun shares the index of the nearest that has
+    some: alone it would be twilight over next to nothing, far from 1, and light up the places that the sun reaches first.
+    The day's sum at each place and height is that of the intervals with sun.
     """
     if np.ndim(air.ozone_cm):
         air = Atmosphere(*(np.ravel(number) for number in air.numbers()))  # type: ignore[arg-type]
-    total, count, start = np.zeros(wm2.shape), np.zeros(len(edges_h)), _start_unix_s(day)
-    for time in day_times_unix_s(day):
-        k = _interval(edges_h, (time - start) / _HOUR_S)
-        if k is None:
-            continue
+    times = day_times_unix_s(day)
+    clear = []
+    for time in times:
         zenith, _, distance = sun.position(time, latitude_deg, longitude_deg)
-        sky = bird(zenith, sun.solar_constant_wm2() / distance**2, pressure_pa(height_m), air)
-        total[k] += sky.black_ground_wm2
-        count[k] += 1
-    course = total / np.maximum(count, 1)[:, np.newaxis]
-    return ClearIndex(edges_h, np.where(course > 0, wm2 / np.where(course > 0, course, 1.0), 0.0))
+        clear.append(bird(zenith, sun.solar_constant_wm2() / distance**2, pressure_pa(height_m), air).black_ground_wm2)
+    steps = intervals(np.linspace(0.0, 24.0, times.size + 1))
+    course = overlap_mean(steps, np.stack(clear), edges_h, least_share=0.0)
+    hours = (edges_h[:, 1] - edges_h[:, 0])[:, np.newaxis]
+    index = _index(wm2 * hours, np.nan_to_num(course * hours), np.nan_to_num(course))
+    cuts = np.asarray(edges_h) * (times.size / 24.0)
+    if np.abs(cuts - np.round(cuts)).max() > 1e-6:
+        return ClearIndex(steps, overlap_mean(edges_h, index, steps))
+    return ClearIndex(edges_h, index)
+
+
+def _index(given: Floats, clear: Floats, course: Floats) -> Floats:
+    """Share of the cloudless energy in each interval (k, n), intervals of weak sun taken together with a stronger one."""
+    index = np.zeros(given.shape)
+    place = np.arange(len(given))
+    for n in range(given.shape[1]):
+        lit = np.flatnonzero(course[:, n] > 0)
+        if not lit.size:
+            continue
+        strong = lit[course[lit, n] >= min(LEAST_CLEAR_WM2, course[:, n].max())]
+        with_ = strong[np.abs(place[lit, np.newaxis] - strong).argmin(axis=1)]
+        total = np.zeros((2, len(given)))
+        np.add.at(total[0], with_, given[lit, n])
+        np.add.at(total[1], with_, clear[lit, n])
+        index[lit, n] = total[0, with_] / total[1, with_]
+    return index
 
 
 class DaySky:
@@ -155,7 +179,7 @@ class DaySky:
         self._start = _start_unix_s(day)
 
     def at(self, unix_s: float) -> Light:
-        """The light at one moment: (n, m); NaN where the cloud or the supplied series is unknown."""
+        """The light at one moment: (n, m); NaN where the sun is up and the cloud or the supplied series is unknown."""
         clear, zenith, space = _clear(unix_s, self.places)
         hour = (unix_s - self._start) / _HOUR_S
         if self.places.supplied is not None:
@@ -170,11 +194,9 @@ class DaySky:
         assert given is not None
         k = _interval(given.edges_h, hour)
         shape = clear.black_ground_wm2.shape
-        if k is None:
-            gap = np.full(shape, np.nan)
-            return Light(gap, gap, gap, gap)
-        index = given.index[k]
-        whole = clear.black_ground_wm2 * index[:, np.newaxis]
+        index = given.index[k] if k is not None else np.full(shape[0], np.nan)
+        black = clear.black_ground_wm2
+        whole = black * np.where(black > 0, index[:, np.newaxis], 1.0)  # by night none is asked
         cosine = np.maximum(np.cos(np.radians(zenith)), 0.0)[:, np.newaxis]
         space_flat = np.broadcast_to(space[:, np.newaxis] * cosine, shape)
         clearness = np.divide(whole, space_flat, out=0.0 * whole, where=space_flat > 0)
@@ -187,7 +209,7 @@ class DaySky:
     def moments(self, orders: int, step_s: float = STEP_S) -> Floats:
         """Day means of G0 r^k for k < orders, and of the direct light: (n, m, orders + 1). [W m-2]
 
-        NaN where any step of the day is unknown: a gap, never a guess.
+        NaN where any step of the day with the sun up is unknown: a gap, never a guess.
         """
         n, m = self.places.latitude_deg.size, self.places.elevation_m.size
         total = np.zeros((n, m, orders + 1))

@@ -65,15 +65,28 @@ def slope_tables() -> tuple[NDArray[np.float32], NDArray[np.float32], NDArray[np
 
 
 def _heights(moments: Lattice, window: Window, elevation_m: NDArray[Any], level0_m: float, level_step_m: float) -> Any:
-    """Moments at each cell's place and height, NaN outside the levels: (y, x, count)."""
-    nodes = moments.at(window)
+    """Moments at each cell's place and height, NaN outside the levels: (y, x, count).
+
+    As in the kernel between node rows first, which gives one line of nodes for each row of cells; then along it.
+    """
+    v = moments.values
     level = (elevation_m.astype(np.float64) - level0_m) / level_step_m
-    inside = (level >= 0) & (level <= nodes.shape[2] - 1)
+    inside = (level >= 0) & (level <= v.shape[2] - 1)
     level = np.where(inside, level, 0.0)
-    low = np.minimum(level.astype(np.int64), nodes.shape[2] - 2)
-    share = (level - low)[..., np.newaxis]
-    rows, cols = np.indices(low.shape)
-    here = nodes[rows, cols, low] + (nodes[rows, cols, low + 1] - nodes[rows, cols, low]) * share
+    low = np.minimum(level.astype(np.int64), v.shape[2] - 2)
+    r, c = np.arange(window.row, window.row + window.rows), np.arange(window.col, window.col + window.cols)
+    i, j = r // moments.row_step, c // moments.col_step
+    fr = ((r - i * moments.row_step) / moments.row_step)[:, np.newaxis, np.newaxis, np.newaxis]
+    fc = ((c - j * moments.col_step) / moments.col_step)[:, np.newaxis]
+    line = v[i] + (v[i + 1] - v[i]) * fr
+    rows = np.arange(r.size)[:, np.newaxis]
+
+    def along(at: Any) -> Any:
+        left = line[rows, j, at]
+        return left + (line[rows, j + 1, at] - left) * fc
+
+    under = along(low)
+    here = under + (along(low + 1) - under) * (level - low)[..., np.newaxis]
     return np.where(inside[..., np.newaxis], here, np.nan)
 
 
@@ -187,10 +200,11 @@ def slope_block(
     lower = around[np.ix_(ib, ja)] + (around[np.ix_(ib, jb)] - around[np.ix_(ib, ja)]) * fx
     a = upper + (lower - upper) * fy[:, np.newaxis]
     lit, direct = day_mean_insolation(here[..., :-1], a), here[..., -1]
-    ratio = np.divide(total.astype(np.float64), reference, out=np.zeros_like(reference), where=reference > 0)
+    beam = np.divide(direct * total, reference, out=np.zeros_like(reference), where=reference > 0)
     widen = np.sqrt(1.0 + east.astype(np.float64) ** 2 + north.astype(np.float64) ** 2)
     v = sky_view / 10000.0
-    ground = (1.0 - v) * widen * a * lit / (1.0 - a * (1.0 - v))
-    whole = direct * ratio + (lit - direct) * v * widen + ground
+    rest = 1.0 - a * (1.0 - v)  # 0 in a closed box of white walls, which no light of the sky reaches
+    ground = np.divide((1.0 - v) * widen * a * lit, rest, out=0.0 * lit, where=rest > 0)
+    whole = beam + (lit - direct) * v * widen + ground
     wanted = seen & (sky_view >= 0) & (slope >= 0) & (slope <= steepest) & ~np.isnan(elevation_m)
     return _stored(whole, wanted, fill, highest), _stored(np.where(np.isnan(whole), np.nan, ground), wanted, fill, highest)

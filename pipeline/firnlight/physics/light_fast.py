@@ -186,7 +186,8 @@ def slope_block(
             here = direct * np.float64(total[c]) / reference if reference > 0.0 else 0.0
             widen = np.sqrt(1.0 + np.float64(east[c]) ** 2 + np.float64(north[c]) ** 2)
             v = view / 10000.0
-            ground = (1.0 - v) * widen * a * lit / (1.0 - a * (1.0 - v))
+            rest = 1.0 - a * (1.0 - v)
+            ground = (1.0 - v) * widen * a * lit / rest if rest > 0.0 else 0.0 * lit
             whole = here + (lit - direct) * v * widen + ground
             if whole == whole:
                 insolation[r, c] = np.int16(_step_int(whole, 10.0, highest))
