@@ -240,3 +240,45 @@ def test_wrong_weather_settings_are_said(area, old, new, said):
     assert said in err
     assert "Traceback" not in err
     assert not list(area.store.rglob("net_radiation.tif"))
+
+
+def then(files, day, name):
+    """Cells of a layer as kept files hold them."""
+    path = f"maps/{day.parent.name}/{day.name}/{name}.tif"
+    with rasterio.MemoryFile(files[path]) as file, file.open() as dataset:
+        return dataset.read(1)
+
+
+@pytest.mark.parametrize("method", ["c", "scs+c"])
+def test_illumination_correction_leaves_snow_and_no_trace_when_taken_back(area, method):
+    assert area.night("--quiet") == 0
+    plain = area.files()
+    area.edit("[albedo]", f'[albedo]\nillumination = "{method}"')
+    assert area.night("--quiet") == 0
+    changed = 0
+    for day in days(area):
+        now = cells(day / "albedo.tif")
+        before, flags = (then(plain, day, name) for name in ("albedo", "quality"))
+        snow = (cells(day / "quality.tif") & flags & 8) > 0
+        both = (now != GAP) & (before != GAP)
+        # reflectance goes through single precision: a last step
+        assert np.abs(now[both & snow].astype(int) - before[both & snow]).max() <= 1
+        changed += (now[both] != before[both]).sum()
+    assert changed > 100
+    area.edit(f'illumination = "{method}"', 'illumination = "none"')
+    assert area.night("--quiet") == 0
+    assert area.files() == plain
+
+
+def test_albedo_of_a_day_is_brighter_than_at_the_overpass_near_noon(area):
+    """Snow reflects more under a low sun, and the overpass is near noon: Gardner & Sharp (2010), as in methods."""
+    assert area.night("--quiet") == 0
+    before = {day: (cells(day / "albedo.tif"), cells(day / "albedo_u.tif")) for day in days(area)}
+    area.edit("[albedo]", '[albedo]\nday = "sun path"')
+    assert area.night("--quiet") == 0
+    for day, (then, then_u) in before.items():
+        now, snow = cells(day / "albedo.tif"), cells(day / "quality.tif") & 8 > 0
+        seen = snow & (now != GAP)
+        assert ((now == GAP) == (then == GAP)).all()
+        assert 0 < (now[seen] - then[seen]).mean() * 1e-4 < 0.05
+        assert (cells(day / "albedo_u.tif")[seen] >= then_u[seen]).all()

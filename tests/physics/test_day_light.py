@@ -10,7 +10,7 @@ from firnlight.core.grid import Grid, Window
 from firnlight.core.settings import Insolation
 from firnlight.io.ground import positions
 from firnlight.physics.clearsky import day_times_unix_s
-from firnlight.physics.day_sky import Cloud, DaySky, Places, clear_sky_index
+from firnlight.physics.day_sky import Cloud, DaySky, Places, index_of_intervals
 from firnlight.stages.chain import Around
 from firnlight.stages.insolation import atmosphere, grid_north_deg
 
@@ -33,7 +33,7 @@ def supplied(hours, value=200.0, height=1500.0):
     if hours == 24:
         course = np.ones(1)
     wm2 = np.repeat((course / course.mean() * value)[:, np.newaxis], 2, axis=1)
-    return edges, wm2, clear_sky_index(DAY, edges, wm2, LAT, LON, np.full(2, height), AIR)
+    return edges, wm2, index_of_intervals(DAY, edges, wm2, LAT, LON, np.full(2, height), AIR)
 
 
 @pytest.mark.parametrize("hours", [1, 3, 6, 24])
@@ -63,7 +63,7 @@ def test_a_station_that_measures_the_clear_sky_gives_it_back():
     start = dt.datetime(2031, 5, 14, tzinfo=dt.UTC).timestamp()
     light = np.array([[float((one := clear.at(t)).direct_wm2[0, 0] + one.diffuse_wm2[0, 0])] for t in day_times_unix_s(DAY)])
     means = light.reshape(48, -1).mean(axis=1, keepdims=True)
-    index = clear_sky_index(DAY, edges, means, LAT[:1], LON[:1], np.array([1500.0]), AIR)
+    index = index_of_intervals(DAY, edges, means, LAT[:1], LON[:1], np.array([1500.0]), AIR)
     lit = means[:, 0] > 1
     assert index.index[lit, 0] == pytest.approx(1.0, abs=1e-9)
     assert start == day_times_unix_s(DAY)[0] - 300
@@ -75,7 +75,7 @@ def test_hours_of_night_may_be_missing_and_hours_of_day_may_not():
     at_night[2] = np.nan  # 02 UTC is 23:36 by the sun
     by_day[15] = np.nan
     for series, known in ((at_night, True), (by_day, False)):
-        index = clear_sky_index(DAY, edges, series, LAT, LON, np.full(2, 1500.0), AIR)
+        index = index_of_intervals(DAY, edges, series, LAT, LON, np.full(2, 1500.0), AIR)
         moments = DaySky(DAY, places(supplied=index)).moments(4)
         assert np.isfinite(moments).all() == known
         assert np.isnan(moments[..., 0]).all() == (not known)

@@ -13,7 +13,7 @@ from firnlight.core.tables import load_table
 from firnlight.physics import sun
 from firnlight.physics.clearsky import STEP_S, Atmosphere, ClearSky, bird, day_times_unix_s, pressure_pa
 from firnlight.physics.cloud import clouded_sky_albedo, transmission
-from firnlight.physics.day_steps import intervals, overlap_mean
+from firnlight.physics.day_steps import intervals, overlap_h
 from firnlight.physics.diffuse import erbs
 from firnlight.physics.light import CODE_DEG, SunPaths
 
@@ -30,7 +30,7 @@ class ClearIndex:
     Attributes
     ----------
     edges_h : (k, 2)      Intervals, hours from 00 UTC.
-    index : (k, n)        Their clear-sky index at each place, see clear_sky_index; NaN where unknown.
+    index : (k, n)        Their clear-sky index at each place, see index_of_intervals; NaN where unknown.
     by_height : whether it goes to other heights with cloudless light; else it is of sea level and kept everywhere.
     """
 
@@ -112,7 +112,7 @@ def _start_unix_s(day: dt.date) -> float:
     return dt.datetime(day.year, day.month, day.day, tzinfo=dt.UTC).timestamp()
 
 
-def clear_sky_index(
+def index_of_intervals(
     day: dt.date, edges_h: Floats, wm2: Floats, latitude_deg: Floats, longitude_deg: Floats, height_m: Floats,
     air: Atmosphere,
 ) -> ClearIndex:  # fmt: skip
@@ -126,42 +126,54 @@ def clear_sky_index(
 
     Returns
     -------
-    ClearIndex   0 where the sun is down for the whole interval, whatever the series says of it. Of intervals that cut a
-    time step of the day, one value per step. An interval with hardly any sun shares the index of the nearest that has
-    some: alone it would be twilight over next to nothing, far from 1, and light up the places that the sun reaches first.
-    The day's sum at each place and height is that of the intervals with sun.
+    ClearIndex   0 where the sun is down for the whole interval, whatever the series says of it; NaN where the height or
+    the air is unknown. Where intervals cut a time step of the day, one value per step. The day's sum at each place and
+    height is that of the intervals with sun.
+
+    Notes
+    -----
+    An interval with hardly any sun shares the index of the nearest that has some: alone it would be twilight over next
+    to nothing, far above 1, and light up the places that the sun reaches first.
     """
     if np.ndim(air.ozone_cm):
         air = Atmosphere(*(np.ravel(number) for number in air.numbers()))  # type: ignore[arg-type]
     times = day_times_unix_s(day)
-    clear = []
-    for time in times:
-        zenith, _, distance = sun.position(time, latitude_deg, longitude_deg)
-        clear.append(bird(zenith, sun.solar_constant_wm2() / distance**2, pressure_pa(height_m), air).black_ground_wm2)
     steps = intervals(np.linspace(0.0, 24.0, times.size + 1))
-    course = overlap_mean(steps, np.stack(clear), edges_h, least_share=0.0)
-    hours = (edges_h[:, 1] - edges_h[:, 0])[:, np.newaxis]
-    index = _index(wm2 * hours, np.nan_to_num(course * hours), np.nan_to_num(course))
-    cuts = np.asarray(edges_h) * (times.size / 24.0)
-    if np.abs(cuts - np.round(cuts)).max() > 1e-6:
-        return ClearIndex(steps, overlap_mean(edges_h, index, steps))
-    return ClearIndex(edges_h, index)
+    shared = overlap_h(edges_h, steps)
+    clear = np.zeros(wm2.shape)
+    for time, hours in zip(times, shared, strict=True):
+        zenith, _, distance = sun.position(time, latitude_deg, longitude_deg)
+        sky = bird(zenith, sun.solar_constant_wm2() / distance**2, pressure_pa(height_m), air)
+        for k in np.flatnonzero(hours):
+            clear[k] += sky.black_ground_wm2 * hours[k]
+    index = _index(wm2, clear, shared.sum(axis=0))
+    full = (1 - 1e-6) * 24.0 / times.size
+    if not ((shared > 0) & (shared < full)).any():
+        return ClearIndex(edges_h, index)
+    per_step = np.full((times.size, wm2.shape[1]), np.nan)
+    for s in np.flatnonzero(shared.sum(axis=1) >= full):
+        used = np.flatnonzero(shared[s])
+        per_step[s] = (index[used] * shared[s, used, np.newaxis]).sum(axis=0) / shared[s].sum()
+    return ClearIndex(steps, per_step)
 
 
-def _index(given: Floats, clear: Floats, course: Floats) -> Floats:
-    """Share of the cloudless energy in each interval (k, n), intervals of weak sun taken together with a stronger one."""
-    index = np.zeros(given.shape)
-    place = np.arange(len(given))
-    for n in range(given.shape[1]):
-        lit = np.flatnonzero(course[:, n] > 0)
+def _index(wm2: Floats, clear: Floats, hours: Floats) -> Floats:
+    """Energy over cloudless energy in each interval, (k, n), those of weak sun taken together with a stronger one.
+
+    wm2 : (k, n) means; clear : (k, n) [W h m-2]; hours : (k,) of each interval.
+    """
+    index = np.where(np.isnan(clear), np.nan, 0.0)
+    for n in range(wm2.shape[1]):
+        lit = np.flatnonzero(clear[:, n] > 0)
         if not lit.size:
             continue
-        strong = lit[course[lit, n] >= min(LEAST_CLEAR_WM2, course[:, n].max())]
-        with_ = strong[np.abs(place[lit, np.newaxis] - strong).argmin(axis=1)]
-        total = np.zeros((2, len(given)))
-        np.add.at(total[0], with_, given[lit, n])
-        np.add.at(total[1], with_, clear[lit, n])
-        index[lit, n] = total[0, with_] / total[1, with_]
+        mean = clear[lit, n] / hours[lit]
+        strong = lit[mean >= min(LEAST_CLEAR_WM2, mean.max())]
+        group = strong[np.abs(lit[:, np.newaxis] - strong).argmin(axis=1)]
+        total = np.zeros((2, len(wm2)))
+        np.add.at(total[0], group, wm2[lit, n] * hours[lit])
+        np.add.at(total[1], group, clear[lit, n])
+        index[lit, n] = total[0, group] / total[1, group]
     return index
 
 

@@ -21,7 +21,7 @@ from firnlight.io.grids import DayField, cell_edges, field_at, on_grid, read_day
 from firnlight.io.station_series import read_series
 from firnlight.physics import humidity
 from firnlight.physics.clearsky import Atmosphere
-from firnlight.physics.day_sky import ClearIndex, Cloud, clear_sky_index
+from firnlight.physics.day_sky import ClearIndex, Cloud, index_of_intervals
 from firnlight.stages.insolation import SkyInputs, SourceCells, atmosphere
 from firnlight.stages.longwave import Air
 
@@ -190,7 +190,7 @@ def day_weather(workflow: Workflow, day: dt.date, longitude_deg: Lattice, latitu
         height = reader.height(grid, grid.elevation)
         place = Atmosphere(*(one[:, np.newaxis] for one in numbers)) if numbers else air  # type: ignore[arg-type]
         at_m = np.zeros(reader.lon.size) if height is None else height
-        supplied = clear_sky_index(day, edges, np.maximum(values, 0), reader.lat, reader.lon, at_m, place)
+        supplied = index_of_intervals(day, edges, np.maximum(values, 0), reader.lat, reader.lon, at_m, place)
         supplied = replace(supplied, by_height=height is not None)
     sky = SkyInputs(numbers, cloud, supplied)
     night = _air(reader, workflow.longwave.source) if workflow.longwave is not None else None
@@ -226,7 +226,7 @@ def _from_station(reader: _Reader, name: str, air: Atmosphere) -> ClearIndex:
     station = reader.workflow.stations[name]
     path = reader.path(station.file)
     if path is None:
-        return clear_sky_index(
+        return index_of_intervals(
             reader.day, _WHOLE_DAY, np.full((1, reader.lon.size), np.nan), reader.lat, reader.lon,
             np.zeros(reader.lon.size), air,
         )  # fmt: skip
@@ -235,7 +235,7 @@ def _from_station(reader: _Reader, name: str, air: Atmosphere) -> ClearIndex:
     if np.isnan(one.values).any():
         reader.gaps.append(f"station {name} has gaps; what needs it stays empty")
     lat, lon, height = (np.array([v]) for v in (station.latitude, station.longitude, station.elevation_m))
-    found = clear_sky_index(reader.day, one.edges_h, np.maximum(one.values, 0)[:, np.newaxis], lat, lon, height, air)
+    found = index_of_intervals(reader.day, one.edges_h, np.maximum(one.values, 0)[:, np.newaxis], lat, lon, height, air)
     return replace(found, index=np.repeat(found.index, reader.lon.size, axis=1))
 
 
