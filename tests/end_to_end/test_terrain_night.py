@@ -282,3 +282,59 @@ def test_albedo_of_a_day_is_brighter_than_at_the_overpass_near_noon(area):
         assert ((now == GAP) == (then == GAP)).all()
         assert 0 < (now[seen] - then[seen]).mean() * 1e-4 < 0.05
         assert (cells(day / "albedo_u.tif")[seen] >= then_u[seen]).all()
+
+
+def test_a_measured_surface_temperature_stands_for_the_airs(area):
+    assert area.night("--quiet") == 0
+    day = days(area)[1]  # in July
+    before, snow = cells(day / "net_longwave.tif"), cells(day / "quality.tif") & 8 > 0
+    path = area.folder / "surface" / day.parent.name / f"{day.name}.tif"
+    path.parent.mkdir(parents=True)
+    with rasterio.open(day / "albedo.tif") as dataset:
+        profile = {"driver": "GTiff", "count": 1, "dtype": "float32", "crs": dataset.crs, "transform": dataset.transform}
+        shape = dataset.shape
+    kelvin = np.full(shape, 320.0, np.float32)
+    kelvin[:, ::2] = -9999.0
+    with rasterio.open(path, "w", height=shape[0], width=shape[1], nodata=-9999.0, **profile) as out:
+        out.write(kelvin, 1)
+    area.edit("[longwave]", '[longwave]\nsurface_temperature = "surface/{tile}/{date}.tif"')
+    touched_before = area.times()
+    assert area.night("--quiet") == 0
+    now, known = cells(day / "net_longwave.tif"), before != GAP
+    odd = np.zeros(shape, bool)
+    odd[:, 1::2] = True
+    assert (now[known & ~odd] == before[known & ~odd]).all()
+    assert (now[known & odd & ~snow] < before[known & odd & ~snow] - 500).all()  # warmer ground loses more
+    assert (known & odd & snow).sum() > 20
+    assert now[known & odd & snow].min() > now[known & odd & ~snow].max()  # snow is not warmer than melting
+    touched = area.touched_since(touched_before)
+    assert not any("insolation" in name or "albedo" in name for name in touched)
+    path.unlink()
+    assert area.night("--quiet") == 0
+    assert (cells(day / "net_longwave.tif") == before).all()
+
+
+def test_a_view_from_the_side_is_brought_to_one_from_above_but_not_over_snow(area):
+    assert area.night("--quiet") == 0
+    before = {day: (cells(day / "albedo.tif"), cells(day / "quality.tif") & 8 > 0) for day in days(area)}
+    area.edit("[albedo]", '[albedo]\nanisotropy = "nadir"')
+    code, _, err = area.run("night")
+    assert code == 3
+    assert "view:off_nadir" in err
+    for item in area.items():
+        body = json.loads(item.read_text(encoding="utf-8"))
+        body["properties"] |= {"view:off_nadir": 15.0, "view:azimuth": 300.0}
+        item.write_text(json.dumps(body), encoding="utf-8")
+    assert area.night("--quiet") == 0
+    seen = 0
+    for day, (then_albedo, snow) in before.items():
+        now = cells(day / "albedo.tif")
+        both = (now != GAP) & (then_albedo != GAP)
+        assert (now[both & snow] == then_albedo[both & snow]).all()
+        ground = both & ~snow
+        if not ground.any():
+            continue
+        seen += ground.sum()
+        change = now[ground].astype(float) - then_albedo[ground]
+        assert 20 < np.abs(change).mean() < 400  # a few per cent of a dark ground
+    assert seen > 500

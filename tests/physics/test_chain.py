@@ -11,6 +11,7 @@ from firnlight.core.layers import layer
 from firnlight.core.settings import Albedo, Conversions
 from firnlight.physics import chain
 from firnlight.physics.chain_fast import absorbed_block, albedo_block, carry_block, net_block
+from firnlight.physics.longwave import MELTING_K, black_body
 from firnlight.stages.albedo import albedo_numbers, carried_share, empty_layers
 
 FLAGS = layer("quality").flags
@@ -123,16 +124,19 @@ def test_net_kernel_equals_the_plain_chain_and_closes(seed, on_slopes):
     slope = rng.integers(0, 7501, shape).astype(np.int16) if on_slopes else np.empty((0, 0), np.int16)
     sky_view = rng.integers(0, 10001, shape).astype(np.int16) if on_slopes else np.empty((0, 0), np.int16)
     cosine = np.cos(np.radians(np.arange(8001) * 0.01))
+    surface_k = rng.uniform(230, 310, shape).astype(np.float32)
+    surface_k[rng.random(shape) < 0.5] = np.nan
     fast = [np.empty(shape, np.int16) for _ in range(3)]
     net_block(
         absorbed, absorbed_u, quality, np.uint8(BITS["snow"]), elevation, covers, emissivity, slope, sky_view, cosine,
-        window.row, window.col, nodes, 16, 16, -500.0, 250.0, 8.0, 4.0, np.int16(FILL), 10000.0, 30000.0, *fast,
+        surface_k, float(black_body(1.0)), MELTING_K, window.row, window.col, nodes, 16, 16, -500.0, 250.0,
+        8.0, 4.0, np.int16(FILL), 10000.0, 30000.0, *fast,
     )  # fmt: skip
     snowy = quality != 0
     view = sky_view / 10000.0 / cosine[slope] if on_slopes else np.ones(shape)
     plain = chain.net_block(
         absorbed, absorbed_u, snowy, elevation, np.where(snowy, emissivity[0], emissivity[covers]), view, window, longwave,
-        -500.0, 250.0, 8.0, 4.0, FILL, 10000, 30000,
+        -500.0, 250.0, 8.0, 4.0, FILL, 10000, 30000, surface_k.astype(float),
     )  # fmt: skip
     for got, name in zip(fast, plain, strict=True):
         assert ((got == FILL) == (plain[name] == FILL)).all()

@@ -91,7 +91,7 @@ class Conversions(_Section):
 class Albedo(_Section):
     conversion: Conversions = Conversions()
     snow_fraction: str = "gascoin_2020"
-    anisotropy: Literal["none"] = "none"
+    anisotropy: Literal["none", "nadir"] = "none"
     day: Literal["overpass", "sun path"] = "overpass"
     illumination: Literal["none", "c", "scs+c"] = "none"
     illumination_over_snow: bool = False
@@ -168,6 +168,7 @@ class Longwave(_Section):
     source: WeatherGrid
     method: str = "prata1996"
     cloud: str = "unsworth_monteith1975"
+    surface_temperature: str | None = None  # raster on the tile's grid in K; {tile} and {date} in its path
     lapse_k_per_m: Annotated[float, Field(ge=-0.02, le=0.02)] = 0.0065
     emissivity: dict[str, Annotated[float, Field(ge=0.5, le=1)]] = {}
     uncertainty_wm2: Annotated[float, Field(ge=0, le=200)] = 10.0

@@ -81,6 +81,8 @@ class _Properties(_Part):
         validation_alias="proj:shape"
     )
     sun_elevation: Annotated[float, Field(ge=-90, le=90)] | None = Field(None, validation_alias="view:sun_elevation")
+    off_nadir: Annotated[float, Field(ge=0, le=90)] | None = Field(None, validation_alias="view:off_nadir")
+    view_azimuth: Annotated[float, Field(ge=0, le=360)] | None = Field(None, validation_alias="view:azimuth")
     version: str = ""
     created: str = ""
     grid_code: str | None = Field(None, validation_alias="grid:code")
@@ -129,6 +131,7 @@ def _scene(item: _Item, item_path: str) -> Scene:
         bands=bands,
         quality=quality,
         sun_elevation_deg=told.sun_elevation,
+        view_deg=None if told.off_nadir is None or told.view_azimuth is None else (told.off_nadir, told.view_azimuth),
         version=told.version,
         created=told.created,
         item_path=item_path,

@@ -57,6 +57,7 @@ class Scene:
     sensor : row of tables/sensors.toml.
     bands : by common name.
     sun_elevation_deg : None where the item does not tell.
+    view_deg : off-nadir angle, and bearing from the point below the sensor to the scene; None where not told.
     version, created : as written in the item, "" where absent.
     checksums : path -> file:checksum of the item.
     reflectance : "surface" or "top of atmosphere".
@@ -76,3 +77,4 @@ class Scene:
     item_path: str
     checksums: dict[str, str]
     reflectance: str = "surface"
+    view_deg: tuple[float, float] | None = None

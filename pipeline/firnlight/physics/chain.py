@@ -11,6 +11,7 @@ from firnlight.core.grid import Window
 from firnlight.core.lattice import Lattice
 from firnlight.physics.angle_albedo import carried_u, carry
 from firnlight.physics.broadband import Conversion, albedo, uncertainty_parts
+from firnlight.physics.longwave import MELTING_K, black_body
 from firnlight.physics.snow import is_snow, ndsi, snow_fraction, snow_limits
 
 Arrays = dict[str, NDArray[Any]]
@@ -186,6 +187,7 @@ def net_block(
     fill: int,
     longest: int,
     highest: int,
+    surface_k: NDArray[np.float64] | None = None,
 ) -> Arrays:
     """Net longwave and net radiation of a block.
 
@@ -198,6 +200,7 @@ def net_block(
     longwave : lattice of (levels, 3), day means: from the sky, sigma T^4 of snow, of other ground; NaN is a gap. [W m-2]
     shared_u, local_u : standard uncertainty of net longwave. [W m-2]
     longest, highest : largest stored integer of net longwave (either sign) and of an uncertainty.
+    surface_k : (y, x) measured temperature of the surface, NaN where only the air's is known. [K]
 
     Returns
     -------
@@ -212,7 +215,11 @@ def net_block(
     share = (level - low)[..., np.newaxis]
     rows, cols = np.indices(low.shape)
     here = nodes[rows, cols, low] + (nodes[rows, cols, low + 1] - nodes[rows, cols, low]) * share
-    balance = (here[..., 0] - np.where(snowy, here[..., 1], here[..., 2])) * emissivity * view
+    up = np.where(snowy, here[..., 1], here[..., 2])
+    if surface_k is not None:
+        kelvin = np.where(snowy, np.minimum(surface_k, MELTING_K), surface_k)
+        up = np.where(np.isnan(surface_k), up, black_body(kelvin))
+    balance = (here[..., 0] - up) * emissivity * view
     seen = (absorbed_stored != fill) & inside & ~np.isnan(balance)
     steps = np.clip(np.floor(np.where(seen, balance, 0.0) * 10.0 + 0.5), -longest, longest).astype(np.int64)
     u = np.where(seen, absorbed_u_stored, 0) / 10.0

@@ -202,14 +202,15 @@ def absorbed_block(
 
 @numba.njit(nogil=True, cache=True)
 def net_block(
-    absorbed, absorbed_u, quality, snow_bit, elevation, covers, emissivity, slope, sky_view, cos_slope, row0, col0,
-    longwave, row_step, col_step, level0_m, level_step_m, shared_u, local_u, fill, longest, highest, net_longwave,
-    net, net_u,
+    absorbed, absorbed_u, quality, snow_bit, elevation, covers, emissivity, slope, sky_view, cos_slope,
+    surface, sigma, melting, row0, col0, longwave, row_step, col_step, level0_m, level_step_m, shared_u, local_u, fill,
+    longest, highest, net_longwave, net, net_u,
 ):  # fmt: skip
     """Net longwave and net radiation of one block; see chain.net_block for the contract."""
     rows, cols = absorbed.shape
     _, _, levels, _ = longwave.shape
     on_slopes = slope.shape[0] > 0
+    measured = surface.shape[0] > 0
     for r in range(rows):
         i = (row0 + r) // row_step
         fr = ((row0 + r) - i * row_step) / row_step
@@ -237,6 +238,11 @@ def net_block(
                 top = top_low + (top_high - top_low) * fz
                 bottom = low + (high - low) * fz
                 value = top + (bottom - top) * fr
+                if side == 1 and measured and surface[r, c] == surface[r, c]:
+                    kelvin = np.float64(surface[r, c])
+                    if snowy and kelvin > melting:
+                        kelvin = melting
+                    value = sigma * kelvin**4
                 balance = value if side == 0 else balance - value
             balance *= emissivity[0] if snowy else emissivity[covers[r, c]]
             if on_slopes:

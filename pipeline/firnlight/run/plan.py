@@ -20,10 +20,10 @@ from firnlight.run.contents import Contents
 from firnlight.run.ground import Ground
 from firnlight.run.ledger import Ledger, Product, Refusal
 from firnlight.run.store import BUDGET, ITEM, Store
-from firnlight.run.tile_sources import TileJob, lattice_positions
+from firnlight.run.tile_sources import TileJob, lattice_positions, surface_temperature_file
 from firnlight.run.weather import Weather, day_weather
 from firnlight.stages import chain
-from firnlight.stages.albedo import AlbedoNumbers, albedo_numbers, carried_share
+from firnlight.stages.albedo import AlbedoNumbers, albedo_numbers, carried_share, seen_from_above
 from firnlight.stages.insolation import insolation_facts
 from firnlight.stages.longwave import emissivities, longwave_facts
 
@@ -129,6 +129,25 @@ class Planner:
             self._numbers[sensor] = albedo_numbers(self.workflow.albedo, sensor, self.workflow.scenes.reflectance)
         return self._numbers[sensor]
 
+    def numbers_of(self, scene: Scene) -> AlbedoNumbers:
+        """Numbers of a scene's sensor, brought to a view from above where that is asked for.
+
+        Raises
+        ------
+        InputProblem : the item does not tell the view.
+        """
+        numbers = self.numbers(scene.sensor)
+        if self.workflow.albedo.anisotropy == "none":
+            return numbers
+        if scene.view_deg is None:
+            raise InputProblem(
+                scene.item_path, "view", "no view:off_nadir and view:azimuth", 'the view, for albedo.anisotropy = "nadir"',
+                'add them to the item, or set albedo.anisotropy = "none"',
+            )  # fmt: skip
+        lon, lat = self.ground.of(scene.tile).centre_deg
+        zenith, azimuth, _ = sun.position(scene.datetime.timestamp(), lat, lon)
+        return seen_from_above(numbers, float(zenith), float(azimuth), scene.view_deg)
+
     def refuse(self, scene: Scene, problem: InputProblem) -> None:
         """Leave a scene out of its tile-day and remember why."""
         day = scene.datetime.astimezone(dt.UTC).date()
@@ -197,6 +216,7 @@ class Planner:
                         scene.item_path, "grid", difference, f"the grid of tile {tile}",
                         "deliver the scene on the tile's grid, or give it another tile name",
                     )  # fmt: skip
+                self.numbers_of(scene)
                 good[scene.id] = self._content(scene)
             except SettingsProblem:
                 raise
@@ -238,9 +258,9 @@ class Planner:
             return Decision(tile, day, "nothing left", "no scene of this day can be used")
         ground = self.ground.of(tile)
         scenes = self._preferred(tile, day, contents)
-        numbers = tuple(self.numbers(scene.sensor) for scene in scenes)
+        numbers = tuple(self.numbers_of(scene) for scene in scenes)
         weather = day_weather(self.workflow, day, *lattice_positions(self.ground.grids[tile]))
-        keys = self._keys(tile, ground.key, [contents[scene.id] for scene in scenes], numbers, weather)
+        keys = self._keys(tile, day, ground.key, [contents[scene.id] for scene in scenes], numbers, weather)
         stale, reasons, touched = self._stale(tile, day, keys)
         if not stale:
             return Decision(tile, day, "done", "nothing has changed", touched=tuple(touched))
@@ -249,7 +269,8 @@ class Planner:
             self.products[tile, day, name] for name in self.names if name not in stale and (tile, day, name) in self.products
         )
         paths = {path for scene in scenes for path, _ in self._files(scene)}
-        paths |= {path for path in (ground.elevation, ground.land_cover) if path}
+        surface = surface_temperature_file(self.workflow, tile, day)
+        paths |= {path for path in (ground.elevation, ground.land_cover, surface) if path}
         stats = {path: os.stat(path) for path in sorted(paths)}
         job = TileJob(
             store=self.store, tile=tile, day=day, grid=self.ground.grids[tile], scenes=scenes, numbers=numbers,
@@ -271,7 +292,13 @@ class Planner:
         return tuple(sorted((s for s in self.scenes[tile, day] if s.id in contents), key=order))
 
     def _keys(
-        self, tile: str, strata_key: str, contents: list[str], numbers: tuple[AlbedoNumbers, ...], weather: Weather
+        self,
+        tile: str,
+        day: dt.date,
+        strata_key: str,
+        contents: list[str],
+        numbers: tuple[AlbedoNumbers, ...],
+        weather: Weather,
     ) -> dict[str, str]:
         workflow, grid, ground = self.workflow, self.ground.grids[tile], self.ground.of(tile)
         classes, longwave = workflow.surface.class_names, workflow.longwave
@@ -291,13 +318,18 @@ class Planner:
         by_cover = longwave is not None and bool(emissivities(longwave, classes)[1])
         inputs: dict[str, object] = {
             "reflectance": contents, "sun": place, "ground": place, "strata": strata_key,
-            "elevation": ground.elevation_id, "weather": weather.sky_key, "air": weather.air_key,
+            "elevation": ground.elevation_id, "weather": weather.sky_key,
+            "air": [weather.air_key, self._surface_id(tile, day)],
             "terrain": ground.relief_key if workflow.insolation.terrain else "",
             "covers": ground.land_cover_id if by_cover else "",
         }  # fmt: skip
         keys = chain.product_keys(inputs, facts, digest)
         keys[ITEM] = digest([[name, keys[name]] for name in self.names if name != ITEM])
         return keys
+
+    def _surface_id(self, tile: str, day: dt.date) -> str:
+        path = surface_temperature_file(self.workflow, tile, day)
+        return self.contents.of(path) if path else ""
 
     def _stale(self, tile: str, day: dt.date, keys: dict[str, str]) -> tuple[list[str], list[str], list[Product]]:
         stale: list[str] = []

@@ -153,9 +153,10 @@ def _run(job: TileJob, writers: dict[str, CogWriter], summary: Summary | None, t
             fresh = scenes is not None and not two_passes
             blocks = scenes.read(window) if fresh and scenes is not None else sources.stored(window, FROM_SCENES)
             relief = sources.relief(window, light.sky.directions, any_seen(blocks)) if two_passes else None
-            chain.flux_layers(
-                blocks, sources.elevation(window), relief, sources.cover(window) if light.places else None, window, light
-            )
+            cover = sources.cover(window) if light.places else None
+            surface_k = sources.surface_k(window) if light.night is not None else None
+            ground = chain.Ground(sources.elevation(window), relief, cover, surface_k)
+            chain.flux_layers(blocks, ground, window, light)
             write(window, blocks, [name for name in writers if not (two_passes and name in FROM_SCENES)])
         if summary is not None:
             summary.add(sources.strata(window), cell_areas_cm2(area, window), blocks, window)

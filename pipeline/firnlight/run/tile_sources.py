@@ -20,8 +20,9 @@ from firnlight.io.bands import SceneReader
 from firnlight.io.cog import CogWriter, read_block
 from firnlight.io.elevation import own_heights
 from firnlight.io.ground import cell_size_m, positions
-from firnlight.io.rasters import open_raster, read_bands, read_window
+from firnlight.io.rasters import dataset_grid, open_raster, read_bands, read_window
 from firnlight.io.scenes import Scene
+from firnlight.physics.longwave import AIR_RANGE_K
 from firnlight.run.ground import TileGround
 from firnlight.run.ledger import Product
 from firnlight.run.relief import horizon_path, read_relief_table
@@ -82,6 +83,15 @@ def lattice_positions(grid: Grid) -> tuple[Lattice, Lattice]:
     return positions(grid, lattice_step(cell_size_m(grid)))
 
 
+def surface_temperature_file(workflow: Workflow, tile: str, day: dt.date) -> str | None:
+    """The raster of a tile's surface temperature on a day, where there is one."""
+    written = workflow.longwave.surface_temperature if workflow.longwave is not None else None
+    if written is None:
+        return None
+    path = workflow.tile_path(written.replace("{date}", day.isoformat()), tile)
+    return str(path) if path.is_file() else None
+
+
 class Sources(threading.local):
     """Open files of one thread: GDAL datasets must not be shared."""
 
@@ -112,6 +122,21 @@ class Sources(threading.local):
         if self._job.ground.elevation is None:
             return np.zeros((window.rows, window.cols), np.float32)
         return own_heights(self._dataset(self._job.ground.elevation), window)
+
+    def surface_k(self, window: Window) -> NDArray[np.float32] | None:
+        """Surface temperature where a raster of the day tells it, else NaN; None without a raster. [K]"""
+        path = surface_temperature_file(self._job.workflow, self._job.tile, self._job.day)
+        if path is None:
+            return None
+        dataset = self._dataset(path)
+        difference = self._job.grid.difference(dataset_grid(dataset))
+        if difference:
+            raise InputProblem(
+                path, "grid", difference, f"the grid of tile {self._job.tile}", "warp the raster to the tile's grid"
+            )  # fmt: skip
+        values = own_heights(dataset, window)
+        believed = (values >= AIR_RANGE_K[0]) & (values <= AIR_RANGE_K[1])
+        return np.where(believed, values, np.float32(np.nan))
 
     def cover(self, window: Window) -> NDArray[Any] | None:
         """Land cover codes, where the workflow names a land cover."""

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -12,6 +12,7 @@ from firnlight.core.errors import SettingsProblem
 from firnlight.core.layers import layer
 from firnlight.core.settings import Albedo
 from firnlight.core.tables import load_table
+from firnlight.physics.anisotropy import nadir_factor
 from firnlight.physics.broadband import Conversion, conversion
 from firnlight.physics.snow import fraction_numbers, snow_limits
 from firnlight.stages.stage import Stage
@@ -46,6 +47,7 @@ class AlbedoNumbers:
     fraction_form: int
     fraction_numbers: tuple[float, ...]
     range_limits: tuple[float, float]
+    to_nadir: tuple[float, ...] = ()  # factor of each band over ground without snow; () = as seen
 
     def facts(self) -> dict[str, Any]:
         """What the numbers of each settings group are, for the keys."""
@@ -54,7 +56,7 @@ class AlbedoNumbers:
             return [one.bands, one.intercept, one.weights, one.quadratic]
 
         return {
-            "conversion": [form(self.ground), form(self.snow)],
+            "conversion": [form(self.ground), form(self.snow), *([self.to_nadir] if self.to_nadir else [])],
             "snow_test": [self.has_snow_test, self.snow_limits],
             "limits": [self.range_limits, self.zenith_limit_deg],
             "errors": [
@@ -76,6 +78,11 @@ class AlbedoNumbers:
             weights[k, at] = one.weights
             if one.quadratic is not None:
                 quadratic[k][np.ix_(at, at)] = one.quadratic
+        if self.to_nadir:
+            # ground's albedo from bands as seen from above: its weights take the factors, so nothing else changes
+            factor = np.array(self.to_nadir)
+            weights[0] *= factor
+            quadratic[0] *= np.outer(factor, factor)
         snow_bands = tuple(self.bands.index(name) if self.has_snow_test else -1 for name in SNOW_BANDS)
         return {
             "zenith_limit": self.zenith_limit_deg,
@@ -143,6 +150,22 @@ def stored_fill(name: str = "albedo") -> int:
     fill = layer(name).nodata
     assert fill is not None
     return fill
+
+
+def seen_from_above(
+    numbers: AlbedoNumbers, sun_zenith_deg: float, sun_azimuth_deg: float, view_deg: tuple[float, float]
+) -> AlbedoNumbers:
+    """Numbers whose snow-free ground is brought to a view from above; snow is left, its shape is another.
+
+    view_deg : off-nadir angle, and bearing from the point below the sensor to the scene (STAC view:azimuth).
+
+    Raises
+    ------
+    InputProblem : a band without parameters.
+    """
+    to_sensor = view_deg[1] + 180.0
+    factors = (nadir_factor(b, sun_zenith_deg, view_deg[0], sun_azimuth_deg - to_sensor) for b in numbers.bands)
+    return replace(numbers, to_nadir=tuple(float(one) for one in factors))
 
 
 def carried_share() -> float:

@@ -141,17 +141,26 @@ def light_of_all_ground(elevation_m: NDArray[np.float32], relief: Relief, window
     return slope_insolation(everywhere, elevation_m, relief, light.around, light.step, window, light.sky)["insolation"]
 
 
-def flux_layers(
-    blocks: Blocks, elevation_m: NDArray[np.float32], relief: Relief | None, cover: NDArray[Any] | None, window: Window,
-    light: Light,
-) -> None:  # fmt: skip
-    """Add insolation and all fluxes that follow from it to the blocks of a window.
+@dataclass(frozen=True, eq=False)
+class Ground:
+    """The ground of a window: height (y, x), NaN where unknown. [m]
 
-    Parameters
+    Attributes
     ----------
-    relief : slope and horizons of the window; None: flat ground.
-    cover : land cover codes of the window, where an emissivity goes by cover.
+    relief : slope and horizons; None: flat ground.
+    cover : land cover codes, where an emissivity goes by cover.
+    surface_k : (y, x) temperature of the surface, NaN where only the air's is known; None: nowhere. [K]
     """
+
+    elevation_m: NDArray[np.float32]
+    relief: Relief | None = None
+    cover: NDArray[Any] | None = None
+    surface_k: NDArray[np.float32] | None = None
+
+
+def flux_layers(blocks: Blocks, ground: Ground, window: Window, light: Light) -> None:
+    """Add insolation and all fluxes that follow from it to the blocks of a window."""
+    relief, elevation_m = ground.relief, ground.elevation_m
     albedo, shape = blocks["albedo"], blocks["albedo"].shape
     if relief is None or light.around is None:
         blocks["insolation"] = flat_insolation(albedo, elevation_m, window, light.sky)
@@ -170,8 +179,10 @@ def flux_layers(
     )  # fmt: skip
     blocks.update(made)
     if light.night is not None and light.emissivity is not None:
-        covers = cover_places(cover, dict(light.places), shape)
-        net_layers(blocks, elevation_m, covers, light.emissivity, relief, window, light.night, light.night_errors)
+        covers = cover_places(ground.cover, dict(light.places), shape)
+        net_layers(
+            blocks, elevation_m, covers, light.emissivity, relief, ground.surface_k, window, light.night, light.night_errors
+        )  # fmt: skip
 
 
 class Around:

@@ -30,6 +30,7 @@ NET_U = Stage(
     "net radiation uncertainty", 1, ("absorbed_shortwave_u", "net_longwave"), ("net_radiation_u",), ("longwave_error",)
 )  # fmt: skip
 _NONE = np.empty((0, 0), np.int16)
+_NO_SURFACE = np.empty((0, 0), np.float32)
 
 
 @dataclass(frozen=True, eq=False)
@@ -108,9 +109,13 @@ def cover_places(codes: NDArray[Any] | None, places: dict[int, int], shape: tupl
 
 def net_layers(
     blocks: dict[str, NDArray[Any]], elevation_m: NDArray[np.float32], covers: NDArray[np.uint8],
-    share: NDArray[np.float64], relief: Relief | None, window: Window, night: Lattice, errors: tuple[float, float],
+    share: NDArray[np.float64], relief: Relief | None, surface_k: NDArray[np.float32] | None, window: Window,
+    night: Lattice, errors: tuple[float, float],
 ) -> None:  # fmt: skip
-    """Add net longwave, net radiation and its uncertainty to the blocks of a window; `share` from emissivities."""
+    """Add net longwave, net radiation and its uncertainty to the blocks of a window.
+
+    `share` comes from emissivities; where `surface_k` is known it stands for the air's temperature.
+    """
     shape = blocks["albedo"].shape
     made = {name: np.empty(shape, np.int16) for name in ("net_longwave", "net_radiation", "net_radiation_u")}
     tangent, _, _ = slope_tables()
@@ -118,6 +123,7 @@ def net_layers(
     net_block(
         blocks["absorbed_shortwave"], blocks["absorbed_shortwave_u"], blocks["quality"], np.uint8(flag_bit("snow")),
         elevation_m, covers, share, relief.slope if relief else _NONE, relief.sky_view if relief else _NONE, cosine,
+        _NO_SURFACE if surface_k is None else surface_k, float(longwave.black_body(1.0)), longwave.MELTING_K,
         window.row, window.col, night.values, night.row_step, night.col_step, LOWEST_M, LEVEL_STEP_M,
         errors[0], errors[1], np.int16(stored_fill("net_longwave")), float(layer("net_longwave").high),
         float(layer("net_radiation_u").high), *made.values(),
