@@ -112,14 +112,18 @@ def test_a_raster_without_crs_or_turned_is_refused(tmp_path):
         assert problem(path).what == what
 
 
-def test_zarr_is_read_where_its_library_is_there(tmp_path, monkeypatch):
-    """The library itself is not among the project's; what the reader makes of an opened store is."""
-    folder = tmp_path / "sw.zarr"
-    folder.mkdir()
-    (folder / "zarr.json").write_text("{}")
-    monkeypatch.setattr(xr.backends, "list_engines", lambda: {"h5netcdf": None})
-    assert "install zarr" in problem(folder).fix
+@pytest.mark.parametrize("form", [2, 3])
+def test_zarr_is_read_in_both_forms(tmp_path, form):
     inner = xr.load_dataset(write(tmp_path / "a.nc", bounds=EACH), engine="h5netcdf", decode_cf=False)
-    monkeypatch.setattr(xr.backends, "list_engines", lambda: {"zarr": None})
-    monkeypatch.setattr(xr, "open_dataset", lambda name, engine, **_: inner if engine == "zarr" else None)
-    assert (read(folder).values == TRUE).all()
+    inner.to_zarr(tmp_path / "sw.zarr", zarr_format=form, consolidated=False)
+    assert (read(tmp_path / "sw.zarr").values == TRUE).all()
+    chunk = max((p for p in (tmp_path / "sw.zarr").rglob("*") if p.is_file()), key=lambda p: p.stat().st_size)
+    chunk.write_bytes(b"nothing")
+    with pytest.raises(InputProblem):
+        read(tmp_path / "sw.zarr")
+
+
+def test_netcdf_3_is_read(tmp_path):
+    inner = xr.load_dataset(write(tmp_path / "a.nc", bounds=EACH), engine="h5netcdf", decode_cf=False)
+    inner.to_netcdf(tmp_path / "classic.nc", engine="scipy", format="NETCDF3_64BIT")
+    assert (read(tmp_path / "classic.nc").values == TRUE).all()

@@ -113,7 +113,7 @@ def open_dataset(path: str | Path) -> xr.Dataset:
 
     Raises
     ------
-    InputProblem : no such file, another format, a library that is not there, or a damaged file.
+    InputProblem : no such file, another format, or a damaged file.
     """
     import xarray as xr
 
@@ -124,24 +124,21 @@ def open_dataset(path: str | Path) -> xr.Dataset:
         raise InputProblem(name, "file", "no such file", wanted, "deliver the file, or correct its path")
     try:
         if file.is_dir():
-            engine, library = "zarr", "zarr"
+            engine = "zarr"
             if not any((file / n).exists() for n in ("zarr.json", ".zgroup", ".zmetadata")):
                 raise InputProblem(name, "file", "a folder that is no Zarr group", wanted, "name the file itself")
         else:
             with file.open("rb") as stream:
                 first = stream.read(8)
             if first.startswith(b"\x89HDF\r\n\x1a\n"):
-                engine, library = "h5netcdf", "h5netcdf"
+                engine = "h5netcdf"
             elif first[:3] == b"CDF" and first[3:4] in (b"\x01", b"\x02"):
-                engine, library = "scipy", "scipy"
+                engine = "scipy"
             else:
                 found = "0 bytes" if not first else f"bytes that begin {first!r}"
                 raise InputProblem(name, "file", found, wanted, "deliver the file in one of these forms")
-        if engine not in xr.backends.list_engines():
-            form = "Zarr" if engine == "zarr" else "NetCDF 3"
-            raise InputProblem(name, "file", f"{form}, without the library that reads it", "NetCDF 4, or that library",
-                               f"install {library} beside firnlight, or convert the file to NetCDF 4")  # fmt: skip
-        return xr.open_dataset(name, engine=engine, decode_cf=False, cache=False)
+        more: dict[str, Any] = {"consolidated": False} if engine == "zarr" else {}
+        return xr.open_dataset(name, engine=engine, decode_cf=False, cache=False, **more)
     except InputProblem:
         raise
     except Exception as error:  # each reader raises its own kinds on damaged bytes
