@@ -338,3 +338,129 @@ def test_a_view_from_the_side_is_brought_to_one_from_above_but_not_over_snow(are
         change = now[ground].astype(float) - then_albedo[ground]
         assert 20 < np.abs(change).mean() < 400  # a few per cent of a dark ground
     assert seen > 500
+
+
+def heights(area, tile="FELL-A"):
+    return area.folder / "static" / tile / "elevation.tif"
+
+
+def test_holes_that_the_elevation_does_not_declare_are_holes(done_area):
+    day = days(done_area)[0]
+    before = cells(day / "insolation.tif")
+    with rasterio.open(heights(done_area), "r+") as dataset:
+        values = dataset.read(1)
+        values[5, 5], values[40:44, 40:44], values[60, 60] = -9999.0, -32768.0, 1e20
+        dataset.nodata = None
+        dataset.write(values, 1)
+    assert done_area.night("--quiet") == 0
+    now = cells(day / "insolation.tif")
+    for hole in ((5, 5), (41, 41), (60, 60)):
+        assert now[hole] == GAP
+    both = (now != GAP) & (before != GAP)
+    assert both.sum() > 0.5 * (before != GAP).sum()
+    # slopes and horizons beside the holes change, the rest of the tile does not
+    assert np.abs(now[both].astype(int) - before[both]).mean() < 20
+    table = json.loads((done_area.store / "terrain/FELL-A/relief.json").read_text(encoding="utf-8"))
+    assert table["low_m"] > 0
+
+
+def test_elevation_without_a_height_is_refused_though_a_neighbour_overlaps(area):
+    with rasterio.open(heights(area), "r+") as dataset:
+        dataset.write(np.full(dataset.shape, -9999.0, np.float32), 1)
+    code, _, err = area.run("night")
+    assert code == 3
+    assert "no cell with a height" in err
+    assert not list((area.store / "maps").rglob("FELL-A/*/insolation.tif"))
+    assert list((area.store / "maps/FELL-B").rglob("insolation.tif"))
+
+
+@pytest.mark.parametrize("name", ["horizon.tif", "sky_view.tif", "slope.tif"])
+def test_damaged_relief_is_made_again(done_area, name):
+    files = done_area.files()
+    path = done_area.store / "terrain/FELL-B" / name
+    path.write_bytes(path.read_bytes()[:-100])
+    next((done_area.store / "maps/FELL-B").rglob("insolation.tif")).unlink()
+    assert done_area.night("--quiet") == 0
+    assert done_area.files() == files
+
+
+def test_a_station_in_the_wrong_place_is_told_and_no_number_is_made_of_it(area):
+    with_source(area, "station")
+    text = area.workflow.read_text(encoding="utf-8")
+    place = next(line for line in text.splitlines() if line.startswith("longitude"))
+    area.edit(place, "longitude = 60.0")
+    code, _, err = area.run("night")
+    assert code == 0
+    assert "times the clear sky: check its place, clock and units" in err
+    for day in days(area):
+        assert (cells(day / "insolation.tif") == GAP).all()
+        assert (cells(day / "albedo.tif") != GAP).any()
+
+
+def test_a_supplied_grid_may_lack_the_night_and_its_height_counts_on_slopes_too(area):
+    area.edit('source = "clear-sky"', SOURCES["grid"])
+    assert area.night("--quiet") == 0
+    own = {day: cells(day / "insolation.tif") for day in days(area)}
+    path = area.folder / "insolation.nc"
+    with xr.open_dataset(path) as data:
+        holes = data.load()
+    name = next(iter(holes.data_vars.keys() - {"time_bounds"}))
+    hour = holes.time.dt.hour.values
+    holes[name].values[(hour >= 0) & (hour < 4)] = np.nan
+    path.unlink()
+    holes.to_netcdf(path, engine="h5netcdf")
+    code, _, err = area.run("night")
+    assert code == 0
+    assert "gaps" not in err
+    for day, before in own.items():
+        assert (cells(day / "insolation.tif") == before).all()
+    with xr.open_dataset(area.folder / "weather.nc") as data:
+        low = data.load()
+    low.surface_altitude.values[:] = 300.0  # the same light, said to be that of low ground: more arrives higher up
+    (area.folder / "low.nc").unlink(missing_ok=True)
+    low.to_netcdf(area.folder / "low.nc", engine="h5netcdf")
+    area.edit('{ grid = "weather.nc", variable = "surface_altitude" }', '{ grid = "low.nc", variable = "surface_altitude" }')
+    assert area.night("--quiet") == 0
+    for day, before in own.items():
+        now = cells(day / "insolation.tif")
+        known = (now != GAP) & (before != GAP)
+        assert now[known].mean() > 1.005 * before[known].mean()
+
+
+def test_gaps_of_static_fields_and_units_told_in_the_settings(area):
+    with xr.open_dataset(area.folder / "weather.nc") as data:
+        bare = data.load()
+    del bare.air_temperature.attrs["units"]
+    bare.to_netcdf(area.folder / "bare.nc", engine="h5netcdf")
+    area.edit('grid = "weather.nc", air_temperature', 'grid = "bare.nc", air_temperature')
+    code, _, err = area.run("night")
+    assert code == 3
+    assert "units" in err
+    area.edit('grid = "bare.nc", air_temperature', 'units = { air_temperature = "K" }, grid = "bare.nc", air_temperature')
+    assert area.night("--quiet") == 0
+    bare.surface_altitude.values[:] = np.nan
+    bare.to_netcdf(area.folder / "holes.nc", engine="h5netcdf")
+    area.edit('grid = "bare.nc"', 'grid = "holes.nc"')
+    code, _, err = area.run("night")
+    assert code == 0
+    assert "surface_altitude has gaps" in err
+    assert all((cells(day / "net_longwave.tif") == GAP).all() for day in days(area))
+
+
+def test_an_emissivity_of_an_unknown_cover_is_a_wrong_setting(area):
+    area.edit("emissivity = { snow = 0.99,", "emissivity = { snow = 0.99, glacierr = 0.9,")
+    code, _, err = area.run("night")
+    assert code == 2
+    assert "glacierr" in err
+    assert not area.store.exists()
+
+
+def test_cells_that_are_not_metres_on_the_ground_have_their_true_size():
+    from firnlight.core.grid import Grid
+    from firnlight.io.elevation import square_cell_m
+
+    assert square_cell_m(Grid("EPSG:32624", 5e5, 5.15e6, 30.0, 30.0, 64, 64), "a") == 30.0
+    stretched = square_cell_m(Grid("EPSG:3857", 0.0, 8.4e6, 60.0, 60.0, 64, 64), "b")  # 60 N: half as long on the ground
+    assert stretched == pytest.approx(30.0, rel=0.01)
+    feet = square_cell_m(Grid("EPSG:2225", 6.5e6, 2.2e6, 100.0, 100.0, 64, 64), "c")
+    assert feet == pytest.approx(30.48, rel=0.01)

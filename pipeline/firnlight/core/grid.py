@@ -13,6 +13,9 @@ from firnlight.core.errors import InputProblem
 SHIFT_LIMIT_CELLS = 0.01  # a larger shift between two rasters of one tile is another grid
 
 
+LOWEST_M, HIGHEST_M = -500.0, 9000.0  # heights of ground that are believed; others are holes in the elevation
+
+
 @dataclass(frozen=True, slots=True)
 class Window:
     """A rectangle of cells: first row, first column, number of rows, number of columns."""

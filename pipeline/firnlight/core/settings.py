@@ -105,7 +105,6 @@ class GridFile(_Section):
 
     grid: str
     label: Literal["start", "end", "middle", "instant"] | None = None
-    units: str | None = None
     step_hours: Annotated[float, Field(gt=0, le=24)] | None = None
     accumulated: Literal["interval", "since start"] | None = None
     starts_hours: tuple[float, ...] | None = Field(default=None, strict=False)
@@ -114,6 +113,7 @@ class GridFile(_Section):
 
 class GridField(GridFile):
     variable: str | None = None
+    units: str | None = None
 
 
 class StationSource(_Section):
@@ -156,6 +156,7 @@ class WeatherGrid(GridFile):
     relative_humidity: str | None = None
     cloud_fraction: str | None = None
     elevation: str | GridField | None = None
+    units: dict[Literal["air_temperature", "vapour_pressure", "dew_point", "relative_humidity", "cloud_fraction"], str] = {}
 
     @model_validator(mode="after")
     def _one_humidity(self) -> WeatherGrid:
@@ -187,6 +188,7 @@ class Station(_Section):
     sensor_height_m: Annotated[float, Field(ge=0, le=100)] = 2.0
     time: str = "time_utc"
     sw_down: str = "sw_down_wm2"
+    units: str | None = None  # of sw_down, where its name does not tell them
     label: Literal["start", "end", "middle"] = "start"
     utc_offset_h: Annotated[float, Field(ge=-14, le=14)] = 0.0
 
@@ -245,6 +247,11 @@ class Workflow(_Section):
         if isinstance(source, StationSource) and source.station not in self.stations:
             known = ", ".join(self.stations) or "none"
             raise ValueError(f"insolation.source names station {source.station!r}; there is [stations.*]: {known}")
+        if self.longwave is not None:
+            covers = {"snow", "ground", *self.surface.classes.values()}
+            for name in self.longwave.emissivity:
+                if name not in covers:
+                    raise ValueError(f"longwave.emissivity names {name!r}; there are: {', '.join(sorted(covers))}")
         if self.needs_relief and self.surface.elevation is None:
             raise ValueError("insolation.terrain and albedo.illumination need surface.elevation")
         return self

@@ -219,8 +219,8 @@ class Totals:
 
     def _shared(self, *, longwave: bool) -> float:
         """Shared parts: one error per source, sources independent of each other. [W m-2]"""
-        parts = [value for name, value in self.shared.items() if longwave or name != LONGWAVE]
-        return math.hypot(*(self._mean(value, U_STEP_WM2) for value in parts)) if self.area else math.nan
+        parts = [(name, value) for name, value in self.shared.items() if longwave or name != LONGWAVE]
+        return math.hypot(*(self._mean(value, U_STEP_WM2) for value in _by_source(parts))) if self.area else math.nan
 
     @property
     def absorbed_u_shared(self) -> float:
@@ -235,7 +235,8 @@ class Totals:
         """Standard uncertainty of reflected / incoming: the parts that come from albedo, over the insolation."""
         if not self.insolation:
             return math.nan
-        calibration = [self._mean(value, U_STEP_WM2) for name, value in self.shared.items() if name not in (SKY, LONGWAVE)]
+        own = [(name, value) for name, value in self.shared.items() if name not in (SKY, LONGWAVE)]
+        calibration = [self._mean(value, U_STEP_WM2) for value in _by_source(own)]
         return math.hypot(self.absorbed_u_independent, self._u_local[0], *calibration) / self.insolation_wm2
 
     @property
@@ -303,3 +304,19 @@ def _joined(
             merged[at] = Near._make(map(add, merged[at], near)) if at in merged else near
         out[grid] = merged
     return out
+
+
+def _by_source(parts: list[tuple[str, int]]) -> list[int]:
+    """Sums of independent sources. A day of several sensors is named by all of them ("calibration a and b") and does not
+    tell whose error a cell has: sums that share a sensor are added in full, which is never too little."""
+    groups: list[tuple[set[str], int]] = []
+    for name, value in parts:
+        sensors, total = set(name.removeprefix("calibration ").split(" and ")), value
+        apart = []
+        for known, sum_ in groups:
+            if known & sensors:
+                sensors, total = sensors | known, total + sum_
+            else:
+                apart.append((known, sum_))
+        groups = [*apart, (sensors, total)]
+    return [total for _, total in groups]

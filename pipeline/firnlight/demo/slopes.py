@@ -174,7 +174,7 @@ def day_fluxes(slopes: Slopes, day: dt.date, seed: int, albedo: Floats, snow: ND
     beam, spread, whole = beam / steps, spread / steps, whole / steps
     widen = np.sqrt(1 + slopes.east**2 + slopes.north**2)
     seen_ground = 1 - slopes.view
-    from_ground = seen_ground * widen * near * whole / (1 - near * seen_ground)
+    from_ground = seen_ground * widen * near * whole * slopes.view / (1 - near * seen_ground)
     error = 1 + _error(slopes, seed, day, "sky", _row("sky_error"))
     return Fluxes(
         (beam + spread * slopes.view * widen + from_ground) * error,

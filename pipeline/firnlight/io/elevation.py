@@ -12,26 +12,36 @@ from rasterio.enums import Resampling
 from rasterio.warp import reproject, transform_bounds
 
 from firnlight.core.errors import InputProblem
-from firnlight.core.grid import Grid, Window
-from firnlight.io.ground import is_geographic
+from firnlight.core.grid import HIGHEST_M, LOWEST_M, Grid, Window
+from firnlight.io.ground import areas, is_geographic, unit_of
 from firnlight.io.rasters import dataset_grid, open_raster, read_window
 
 SQUARE = 1e-6  # relative difference of a cell's sides that is rounding
+UNEVEN = 0.01  # of cells of one projection within a tile; slopes are then right to a per cent
 
 
 def square_cell_m(grid: Grid, where: str) -> float:
-    """Side of the tile's cells. [m]
+    """Side of the tile's cells on the ground, at the tile's centre. [m]
 
     Raises
     ------
-    InputProblem : cells in degrees or not square: slopes and horizons cannot be worked out on them.
+    InputProblem : cells in degrees, not square, or of very different size within the tile: slopes and horizons cannot be
+        worked out on them.
     """
     if is_geographic(grid.crs) or abs(grid.dx - grid.dy) > SQUARE * grid.dx:
         raise InputProblem(
             where, "grid", f"cells of {grid.dx:g} x {grid.dy:g} in {grid.crs[:40]}", "square cells in metres",
             "warp scenes and elevation to a projected grid, or set insolation.terrain = false",
         )  # fmt: skip
-    return grid.dx
+    nominal = grid.dx * unit_of(grid.crs)
+    sides = np.sqrt(areas(grid).values) / 100  # from cm2
+    true = float(sides[sides.shape[0] // 2, sides.shape[1] // 2])
+    if np.ptp(sides) > UNEVEN * true:
+        raise InputProblem(
+            where, "grid", f"cells of {sides.min():.4g} to {sides.max():.4g} m on the ground", "cells of one size",
+            "warp scenes and elevation to a projection made for the area, such as UTM, or set insolation.terrain = false",
+        )  # fmt: skip
+    return nominal if abs(nominal - true) < UNEVEN * true else true
 
 
 def bounds_in(grid: Grid, crs: str) -> tuple[float, float, float, float]:
@@ -40,14 +50,14 @@ def bounds_in(grid: Grid, crs: str) -> tuple[float, float, float, float]:
     return float(box[0]), float(box[1]), float(box[2]), float(box[3])
 
 
-def reaches(other: Grid, grid: Grid, margin_m: float) -> bool:
-    """Whether `other` covers some ground within `margin_m` of `grid`."""
+def reaches(other: Grid, grid: Grid, margin: float) -> bool:
+    """Whether `other` covers some ground within `margin` of `grid`, in its units."""
     left, bottom, right, top = bounds_in(other, grid.crs)
     return (
-        left < grid.right + margin_m
-        and right > grid.left - margin_m
-        and bottom < grid.top + margin_m
-        and top > grid.bottom - margin_m
+        left < grid.right + margin
+        and right > grid.left - margin
+        and bottom < grid.top + margin
+        and top > grid.bottom - margin
     )
 
 
@@ -87,7 +97,7 @@ def with_margin(
         except (rasterio.errors.RasterioError, InputProblem):
             unread.add(str(path))
             continue
-        np.copyto(out, found, where=~np.isnan(found))
+        np.copyto(out, found, where=_believed(found))
     row0, col0 = max(window.row - margin, 0), max(window.col - margin, 0)
     row1 = min(window.row + window.rows + margin, grid.rows)
     col1 = min(window.col + window.cols + margin, grid.cols)
@@ -102,9 +112,21 @@ def with_margin(
 
 
 def own_heights(dataset: object, window: Window) -> NDArray[np.float32]:
-    """Elevation of a window of a tile: (rows, cols); NaN where the file has none. [m]"""
+    """Elevation of a window of a tile: (rows, cols); NaN where the file has none, or none that ground can have. [m]"""
+    values = plain_values(dataset, window)
+    values[~_believed(values)] = np.nan
+    return values
+
+
+def plain_values(dataset: object, window: Window) -> NDArray[np.float32]:
+    """The first band of a window: (rows, cols); NaN where the file has no data."""
     values: NDArray[np.float32] = read_window(dataset, window).astype(np.float32)
     nodata = getattr(dataset, "nodata", None)
     if nodata is not None:
         values[values == np.float32(nodata)] = np.nan
     return values
+
+
+def _believed(values: NDArray[np.float32]) -> NDArray[np.bool_]:
+    """Heights of ground; a hole that the file does not declare is often -9999 or -32768."""
+    return np.asarray((values >= LOWEST_M) & (values <= HIGHEST_M))

@@ -4,12 +4,13 @@ A cell's light is the sum of three streams, each per unit of horizontal area, so
 
     beam      mean over the day of  DNI lit max(0, s_up - s_east dz/dx - s_north dz/dy)
     sky       (G - B) V / cos S
-    terrain   (1 - V) / cos S  x  a G / (1 - a (1 - V))
+    terrain   (1 - V) / cos S  x  a G V / (1 - a (1 - V))
 
 s is the unit vector to the sun in the grid's directions, `lit` 1 where the sun stands above the cell's horizon, S the
 slope, V its sky view (Dozier & Frew 1990), G the insolation of flat ground among surroundings of albedo a, with the
 light that goes to and fro between ground and sky, B its direct part. What a tilted cell sees that is not sky is
-terrain, 1 - V: so nothing is lost between cells.
+terrain, 1 - V: so nothing is lost between cells. The ground around is taken to see as much sky as the cell and to light
+itself, as in a hollow: the deeper, the darker.
 """
 
 from __future__ import annotations
@@ -204,7 +205,7 @@ def slope_block(
     widen = np.sqrt(1.0 + east.astype(np.float64) ** 2 + north.astype(np.float64) ** 2)
     v = sky_view / 10000.0
     rest = 1.0 - a * (1.0 - v)  # 0 in a closed box of white walls, which no light of the sky reaches
-    ground = np.divide((1.0 - v) * widen * a * lit, rest, out=0.0 * lit, where=rest > 0)
-    whole = beam + (lit - direct) * v * widen + ground
+    ground = np.divide((1.0 - v) * widen * a * lit * v, rest, out=0.0 * lit, where=rest > 0)
+    whole = np.maximum(beam + (lit - direct) * v * widen + ground, 0.0)
     wanted = seen & (sky_view >= 0) & (slope >= 0) & (slope <= steepest) & ~np.isnan(elevation_m)
     return _stored(whole, wanted, fill, highest), _stored(np.where(np.isnan(whole), np.nan, ground), wanted, fill, highest)

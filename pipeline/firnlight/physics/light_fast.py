@@ -187,8 +187,9 @@ def slope_block(
             widen = np.sqrt(1.0 + np.float64(east[c]) ** 2 + np.float64(north[c]) ** 2)
             v = view / 10000.0
             rest = 1.0 - a * (1.0 - v)
-            ground = (1.0 - v) * widen * a * lit / rest if rest > 0.0 else 0.0 * lit
+            ground = (1.0 - v) * widen * a * lit * v / rest if rest > 0.0 else 0.0 * lit
             whole = here + (lit - direct) * v * widen + ground
             if whole == whole:
+                whole = max(whole, 0.0)
                 insolation[r, c] = np.int16(_step_int(whole, 10.0, highest))
                 terrain_light[r, c] = np.int16(_step_int(ground, 10.0, highest))

@@ -99,13 +99,14 @@ class Ground:
         """Elevation files around a tile, and the key of its relief."""
         grid, around = self.grids[tile], []
         surface = self.workflow.surface
-        margin_m = margin_cells(square_cell_m(grid, str(surface.elevation))) * grid.dx
+        cell_m = square_cell_m(grid, str(surface.elevation))
+        margin = margin_cells(cell_m) * grid.dx  # in the grid's own units
         if surface.wider_elevation is not None:
             wider = self._path(surface.wider_elevation, tile, "surface.wider_elevation")
             around.append(str(wider))
         for name, other in sorted(self.grids.items()):
             path = self.workflow.tile_path(str(surface.elevation), name)
-            if name != tile and path.is_file() and reaches(other, grid, margin_m):
+            if name != tile and path.is_file() and reaches(other, grid, margin):
                 around.append(str(path))
         facts = [RELIEF_VERSION, DIRECTIONS, REACH_M, _place(grid), elevation_id, [self.contents.of(p) for p in around]]
         return tuple(around), text_id(json.dumps(facts))

@@ -23,12 +23,13 @@ from firnlight.core.layers import layer
 from firnlight.core.tables import load_table
 from firnlight.io.atomic import replacing, write_text
 from firnlight.io.cog import CogWriter
-from firnlight.io.elevation import square_cell_m, with_margin
+from firnlight.io.elevation import own_heights, square_cell_m, with_margin
+from firnlight.io.rasters import open_raster
 from firnlight.physics.horizon_fast import horizon_codes, sky_view_add
 from firnlight.physics.terrain import gradient, slope_aspect_deg
 from firnlight.stages.insolation import DIRECTIONS
 
-RELIEF_VERSION = 1
+RELIEF_VERSION = 2
 REACH_M, MOST_MARGIN = 15_000.0, 1024  # ground looked at around a tile; a mountain beyond it casts no shadow here
 CORE = 3072  # cells of a side worked on at once
 STRIP = 256  # rows of slopes worked on at once
@@ -43,6 +44,7 @@ class ReliefTable:
     low_m: float
     high_m: float
     unread: tuple[str, ...] = ()  # elevation files of the ground around that could not be read
+    sizes: tuple[int, ...] = ()  # of the rasters, in bytes
 
 
 def table_path(folder: Path) -> Path:
@@ -62,7 +64,7 @@ def read_relief_table(folder: Path) -> ReliefTable:
     """
     try:
         body = json.loads(table_path(folder).read_text(encoding="utf-8"))
-        return ReliefTable(body["key"], body["low_m"], body["high_m"], tuple(body["unread"]))
+        return ReliefTable(body["key"], body["low_m"], body["high_m"], tuple(body["unread"]), tuple(body["sizes"]))
     except (OSError, ValueError, TypeError, KeyError) as error:
         raise InputProblem(
             str(table_path(folder)), "relief", str(error), "the table of a tile's relief",
@@ -72,11 +74,15 @@ def read_relief_table(folder: Path) -> ReliefTable:
 
 def is_made(folder: Path, key: str) -> bool:
     """Whether the relief of these inputs lies there whole."""
-    files = [folder / f"{name}.tif" for name in NAMES] + [horizon_path(folder)]
     try:
-        return read_relief_table(folder).key == key and all(path.is_file() for path in files)
-    except InputProblem:
+        table = read_relief_table(folder)
+        return table.key == key and table.sizes == _sizes(folder)
+    except (InputProblem, OSError):
         return False
+
+
+def _sizes(folder: Path) -> tuple[int, ...]:
+    return tuple(path.stat().st_size for path in (*(folder / f"{name}.tif" for name in NAMES), horizon_path(folder)))
 
 
 def margin_cells(cell_m: float) -> int:
@@ -117,9 +123,10 @@ def build_relief(grid: Grid, own: str, around: Sequence[str], folder: Path, key:
             with ExitStack() as stack:
                 horizon = stack.enter_context(rasterio.open(scratch, "w", **_horizon_profile(grid)))
                 pool = stack.enter_context(ThreadPoolExecutor(workers))
+                tile = stack.enter_context(open_raster(own))
                 for core in _cores(grid):
                     height = with_margin(grid, core, margin, own, around, unread)
-                    inside = height[margin : margin + core.rows, margin : margin + core.cols]
+                    inside = own_heights(tile, core)
                     if not np.isnan(inside).all():
                         low, high = min(low, float(np.nanmin(inside))), max(high, float(np.nanmax(inside)))
                     _piece(height, core, margin, cell_m, horizon, writers, pool, min(workers + 1, DIRECTIONS))
@@ -132,7 +139,7 @@ def build_relief(grid: Grid, own: str, around: Sequence[str], folder: Path, key:
     finally:
         for writer in writers.values():
             writer.discard()
-    table = ReliefTable(key, low, high, tuple(sorted(unread)))
+    table = ReliefTable(key, low, high, tuple(sorted(unread)), _sizes(folder))
     write_text(table_path(folder), json.dumps(vars(table)) + "\n")
     return table
 

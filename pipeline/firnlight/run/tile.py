@@ -175,8 +175,8 @@ def _cell_factors(job: TileJob, sources: Sources, light: chain.Light, area: Latt
 
     def gather(window: Window) -> None:
         relief = sources.relief(window, light.sky.directions)
-        whole = chain.light_of_all_ground(sources.elevation(window), relief, window, light)
-        means.add(whole, cell_areas_cm2(area, window) // CM2_PER_M2, window)
+        flat, slopes = chain.light_of_all_ground(sources.elevation(window), relief, window, light)
+        means.add(flat, slopes, cell_areas_cm2(area, window) // CM2_PER_M2, window)
 
     run_blocks(gather, job.grid.windows(*job.block), {"": lambda: None}, threads)
     return means.factors()

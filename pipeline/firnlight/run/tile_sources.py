@@ -18,7 +18,7 @@ from firnlight.core.layers import day_layers, layer
 from firnlight.core.settings import Workflow
 from firnlight.io.bands import SceneReader
 from firnlight.io.cog import CogWriter, read_block
-from firnlight.io.elevation import own_heights
+from firnlight.io.elevation import own_heights, plain_values
 from firnlight.io.ground import cell_size_m, positions
 from firnlight.io.rasters import dataset_grid, open_raster, read_bands, read_window
 from firnlight.io.scenes import Scene
@@ -134,7 +134,7 @@ class Sources(threading.local):
             raise InputProblem(
                 path, "grid", difference, f"the grid of tile {self._job.tile}", "warp the raster to the tile's grid"
             )  # fmt: skip
-        values = own_heights(dataset, window)
+        values = plain_values(dataset, window)
         believed = (values >= AIR_RANGE_K[0]) & (values <= AIR_RANGE_K[1])
         return np.where(believed, values, np.float32(np.nan))
 
@@ -159,7 +159,7 @@ class Sources(threading.local):
         """Slope, and horizons of some directions; of a window in which nothing is seen, no horizon is read."""
         folder = self._job.store.relief(self._job.tile)
         slope, aspect, view = (
-            read_window(self._dataset(folder / f"{name}.tif"), window) for name in ("slope", "aspect", "sky_view")
+            read_bands(self._dataset(folder / f"{name}.tif"), window, [1])[0] for name in ("slope", "aspect", "sky_view")
         )
         if seen:
             codes = read_bands(self._dataset(horizon_path(folder)), window, [d + 1 for d in directions])

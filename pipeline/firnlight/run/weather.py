@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from firnlight.core.errors import InputProblem, SettingsProblem
 from firnlight.core.lattice import Lattice
-from firnlight.core.settings import GridField, GridFile, StationSource, SuppliedGrid, WeatherGrid, Workflow
+from firnlight.core.settings import GridField, GridFile, Station, StationSource, SuppliedGrid, WeatherGrid, Workflow
 from firnlight.io.grid_time import DayMissing
 from firnlight.io.grids import DayField, cell_edges, field_at, on_grid, read_day, read_static_field
 from firnlight.io.station_series import read_series
@@ -27,6 +27,7 @@ from firnlight.stages.longwave import Air
 
 Floats = NDArray[np.float64]
 AROUND_DEG = 0.5  # read beside the tile
+BRIGHTEST_INDEX = 2.0  # of a mean over an interval: snow and cloud between them can double a clear sky over black ground
 _AIR = {
     "aerosol_500nm": "aerosol_optical_depth", "aerosol_380nm": "aerosol_optical_depth",
     "water_vapour_cm": "water_vapour", "ozone_cm": "ozone",
@@ -88,7 +89,7 @@ class _Reader:
         if path is None:
             return None
         try:
-            return _read_day(path, _stamp(path), variable, self.day, quantity, self.box, file)
+            return _read_day(path, _stamp(path), variable, self.day, quantity, self.box, _told(file, quantity))
         except DayMissing as problem:
             self.gaps.append(f"{path.name}: {problem.found}; what needs it stays empty")
             return None
@@ -98,16 +99,32 @@ class _Reader:
         if field is None:
             return _WHOLE_DAY, np.full((1, self.lon.size), np.nan)
         values = field_at(field, self.lon, self.lat)
-        if np.isnan(values).any():
-            self.gaps.append(f"{field.name} has gaps; what needs it stays empty")
         return field.edges_h, values
+
+    def told(self, name: str, values: Floats) -> Floats:
+        """The same values, with a word where they have gaps."""
+        if np.isnan(values).any():
+            self.gaps.append(f"{name} has gaps; what needs it stays empty")
+        return values
+
+    def sunlit(self, name: str, index: ClearIndex) -> ClearIndex:
+        """A clear-sky index without what no sky gives: there it is a gap, and told."""
+        too_bright = index.index > BRIGHTEST_INDEX
+        if too_bright.any():
+            self.gaps.append(
+                f"{name} is up to {np.nanmax(index.index):.1f} times the clear sky: check its place, clock and units; "
+                "those hours are left out, and what needs them stays empty"
+            )
+            return replace(index, index=np.where(too_bright, np.nan, index.index))
+        self.told(name, index.index)
+        return index
 
     def static(self, file: GridFile, variable: str | None, quantity: str) -> Floats:
         path = self.path(file.grid)
         if path is None:
             return np.full(self.lon.size, np.nan)
-        field = _read_static(path, _stamp(path), variable, self.day, quantity, self.box, file)
-        return np.asarray(field_at(field, self.lon, self.lat)[0])
+        field = _read_static(path, _stamp(path), variable, self.day, quantity, self.box, _told(file, quantity))
+        return self.told(field.name, np.asarray(field_at(field, self.lon, self.lat)[0]))
 
     def height(self, file: GridFile, elevation: str | GridField | None) -> Floats | None:
         """Height of the weather's own ground; None where it is not told. [m]"""
@@ -115,7 +132,7 @@ class _Reader:
             return None
         if isinstance(elevation, GridField):
             return self.static(elevation, elevation.variable, "surface_altitude")
-        return self.static(file.model_copy(update={"units": None}), elevation, "surface_altitude")
+        return self.static(GridField(grid=file.grid, crs=file.crs), elevation, "surface_altitude")
 
 
 def _stamp(path: Path) -> tuple[int, int]:
@@ -123,28 +140,42 @@ def _stamp(path: Path) -> tuple[int, int]:
     return found.st_size, found.st_mtime_ns
 
 
-@lru_cache(maxsize=64)
-def _read_day(
-    path: Path, stamp: tuple[int, int], variable: str | None, day: dt.date, quantity: str, box: Any, file: GridFile
-) -> DayField:
-    # units, steps and starts told in the settings are those of the flux; a file of several states tells its own
-    told: dict[str, Any] = {"units": file.units} if not isinstance(file, WeatherGrid) else {}
-    return read_day(
-        path, variable, day, quantity, around=box, label=file.label, step_hours=file.step_hours,
-        accumulated=file.accumulated, starts_hours=file.starts_hours, crs=file.crs, **told,
+def _told(file: GridFile, quantity: str) -> tuple[tuple[str, Any], ...]:
+    """What the settings tell of a file that it does not tell itself, for one quantity."""
+    if isinstance(file, WeatherGrid):  # units by quantity, since the file holds several
+        of_each: dict[Any, str] = dict(file.units)
+        units = of_each.get(quantity)
+    else:
+        units = file.units if isinstance(file, GridField) else None
+    return (
+        ("units", units), ("label", file.label), ("step_hours", file.step_hours), ("accumulated", file.accumulated),
+        ("starts_hours", file.starts_hours), ("crs", file.crs),
     )  # fmt: skip
 
 
 @lru_cache(maxsize=64)
+def _read_day(
+    path: Path, stamp: tuple[int, int], variable: str | None, day: dt.date, quantity: str, box: Any,
+    told: tuple[tuple[str, Any], ...],
+) -> DayField:  # fmt: skip
+    return read_day(path, variable, day, quantity, around=box, **dict(told))
+
+
+@lru_cache(maxsize=64)
 def _read_static(
-    path: Path, stamp: tuple[int, int], variable: str | None, day: dt.date, quantity: str, box: Any, file: GridFile
-) -> DayField:
-    return read_static_field(path, variable, day, quantity, around=box, units=file.units, crs=file.crs)
+    path: Path, stamp: tuple[int, int], variable: str | None, day: dt.date, quantity: str, box: Any,
+    told: tuple[tuple[str, Any], ...],
+) -> DayField:  # fmt: skip
+    own = dict(told)
+    return read_static_field(path, variable, day, quantity, around=box, units=own["units"], crs=own["crs"])
 
 
 @lru_cache(maxsize=8)
-def _station_series(path: Path, stamp: tuple[int, int], column: str, label: Any, time: str, offset_h: float) -> Any:
-    return read_series(path, column, "flux", label=label, time_column=time, utc_offset_hours=offset_h)
+def _station_series(path: Path, stamp: tuple[int, int], station: Station) -> Any:
+    return read_series(
+        path, station.sw_down, "flux", units=station.units, label=station.label, time_column=station.time,
+        utc_offset_hours=station.utc_offset_h,
+    )  # fmt: skip
 
 
 def needs_weather(workflow: Workflow) -> bool:
@@ -178,7 +209,7 @@ def day_weather(workflow: Workflow, day: dt.date, longitude_deg: Lattice, latitu
     if settings.cloud is not None:
         one = settings.cloud
         edges, values = reader.at_nodes(reader.field(one, one.variable, "cloud_fraction"))
-        cloud = Cloud(edges.mean(axis=1), np.clip(values, 0, 1))
+        cloud = Cloud(edges.mean(axis=1), np.clip(reader.told("cloud fraction", values), 0, 1))
     elif isinstance(settings.source, StationSource):
         supplied = _from_station(reader, settings.source.station, air)
     elif isinstance(settings.source, SuppliedGrid):
@@ -191,7 +222,7 @@ def day_weather(workflow: Workflow, day: dt.date, longitude_deg: Lattice, latitu
         place = Atmosphere(*(one[:, np.newaxis] for one in numbers)) if numbers else air  # type: ignore[arg-type]
         at_m = np.zeros(reader.lon.size) if height is None else height
         supplied = index_of_intervals(day, edges, np.maximum(values, 0), reader.lat, reader.lon, at_m, place)
-        supplied = replace(supplied, by_height=height is not None)
+        supplied = replace(reader.sunlit("the supplied insolation", supplied), by_height=height is not None)
     sky = SkyInputs(numbers, cloud, supplied)
     night = _air(reader, workflow.longwave.source) if workflow.longwave is not None else None
     gaps = tuple(dict.fromkeys(reader.gaps))
@@ -200,10 +231,8 @@ def day_weather(workflow: Workflow, day: dt.date, longitude_deg: Lattice, latitu
 
 def _cells(field: DayField, lon: Lattice, lat: Lattice) -> SourceCells:
     x, y = on_grid(field, lon.values, lat.values)
-    hours = np.diff(field.edges_h, axis=1)[:, :, np.newaxis]
     return SourceCells(
-        Lattice(lon.row_step, lon.col_step, x), Lattice(lat.row_step, lat.col_step, y), *cell_edges(field),
-        np.maximum((field.values * hours).sum(axis=0) / 24, 0.0),
+        Lattice(lon.row_step, lon.col_step, x), Lattice(lat.row_step, lat.col_step, y), *cell_edges(field)
     )  # fmt: skip
 
 
@@ -230,18 +259,18 @@ def _from_station(reader: _Reader, name: str, air: Atmosphere) -> ClearIndex:
             reader.day, _WHOLE_DAY, np.full((1, reader.lon.size), np.nan), reader.lat, reader.lon,
             np.zeros(reader.lon.size), air,
         )  # fmt: skip
-    series = _station_series(path, _stamp(path), station.sw_down, station.label, station.time, station.utc_offset_h)
+    series = _station_series(path, _stamp(path), station)
     one = series.day(reader.day)
-    if np.isnan(one.values).any():
-        reader.gaps.append(f"station {name} has gaps; what needs it stays empty")
     lat, lon, height = (np.array([v]) for v in (station.latitude, station.longitude, station.elevation_m))
     found = index_of_intervals(reader.day, one.edges_h, np.maximum(one.values, 0)[:, np.newaxis], lat, lon, height, air)
+    found = reader.sunlit(f"station {name}", found)
     return replace(found, index=np.repeat(found.index, reader.lon.size, axis=1))
 
 
 def _air(reader: _Reader, grid: WeatherGrid) -> Air:
     def read(variable: str, quantity: str) -> tuple[Floats, Floats]:
-        return reader.at_nodes(reader.field(grid, variable, quantity))
+        edges, values = reader.at_nodes(reader.field(grid, variable, quantity))
+        return edges, reader.told(variable, values)
 
     edges, temperature = read(grid.air_temperature, "air_temperature")
     turn: dict[str, Callable[[Floats], Floats]] = {
@@ -280,7 +309,7 @@ def _sky_key(sky: SkyInputs, cells: SourceCells | None) -> str:
     if sky.supplied is not None:
         parts += [sky.supplied.edges_h, sky.supplied.index, np.array(sky.supplied.by_height)]
     if cells is not None:
-        parts += [cells.x.values, cells.y.values, cells.edges_x, cells.edges_y, cells.wm2]
+        parts += [cells.x.values, cells.y.values, cells.edges_x, cells.edges_y]
     return _digest(parts) if parts else ""
 
 

@@ -134,11 +134,15 @@ class Light:
     factors: NDArray[np.float64] | None = None
 
 
-def light_of_all_ground(elevation_m: NDArray[np.float32], relief: Relief, window: Window, light: Light) -> NDArray[np.int16]:
-    """Insolation on slopes of every cell with a height, seen or not: what a supplied grid's mean is compared with."""
+def light_of_all_ground(
+    elevation_m: NDArray[np.float32], relief: Relief, window: Window, light: Light
+) -> tuple[NDArray[np.int16], NDArray[np.int16]]:
+    """Insolation of every cell with a height, seen or not: as if the ground were flat, and on its slopes."""
     assert light.around is not None
     everywhere = ~np.isnan(elevation_m)
-    return slope_insolation(everywhere, elevation_m, relief, light.around, light.step, window, light.sky)["insolation"]
+    flat = flat_insolation(np.zeros(elevation_m.shape, np.int16), elevation_m, window, light.sky)
+    slopes = slope_insolation(everywhere, elevation_m, relief, light.around, light.step, window, light.sky)
+    return flat, slopes["insolation"]
 
 
 @dataclass(frozen=True, eq=False)

@@ -11,7 +11,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from firnlight.core.grid import Window
+from firnlight.core.grid import HIGHEST_M, LOWEST_M, Window
 from firnlight.core.lattice import Lattice
 from firnlight.core.layers import layer
 from firnlight.core.settings import AtmosphereSettings, Insolation
@@ -34,12 +34,13 @@ SLOPE_PARALLEL = Stage("slope-parallel insolation", 1, ("insolation", "terrain")
 
 # heights of the levels between which the kernel interpolates; the curvature of insolation with height over one
 # step stays under 0.01 W m-2 (tests/stages/test_insolation.py)
-LOWEST_M, HIGHEST_M, LEVEL_STEP_M = -500.0, 9000.0, 250.0
+LEVEL_STEP_M = 250.0  # from LOWEST_M to HIGHEST_M
 ORDERS = 4  # powers of albedo in the ground-sky series; the rest is summed as a geometric tail
 LATTICE_SPACING_M = 12_000.0
 DIRECTIONS = 32  # of the horizon
 AROUND_M = 500.0  # side of the coarse cells whose albedo stands for the surroundings
 PATH_HEIGHTS = 5
+LEAST_CELL_M2 = 4_000_000  # of a supplied grid: smaller ones do not hold the slopes that give and take from each other
 SHAPE_HEIGHT_M = 1500.0  # where direct and diffuse light are weighed for the albedo of a day; they hardly change with it
 
 
@@ -97,61 +98,69 @@ def around_step(cell_m: float) -> int:
 
 @dataclass(frozen=True, eq=False)
 class SourceCells:
-    """The cells of a supplied grid under a tile, whose means must be kept when their light is spread over terrain.
+    """The cells of a supplied grid under a tile, whose energy must be kept when their light is spread over terrain.
 
     Attributes
     ----------
     x, y : positions of the tile's nodes in the grid's CRS, (nr, nc) each.
     edges_x, edges_y : (nx + 1,), (ny + 1,) borders of the grid's cells, ascending.
-    wm2 : (ny, nx)  Supplied mean of the day; NaN is a gap. [W m-2]
     """
 
     x: Lattice
     y: Lattice
     edges_x: NDArray[np.float64]
     edges_y: NDArray[np.float64]
-    wm2: NDArray[np.float64]
+
+    @property
+    def count(self) -> int:
+        return (self.edges_x.size - 1) * (self.edges_y.size - 1)
 
     def numbers(self, window: Window) -> NDArray[np.intp]:
         """Which cell of the grid holds the centre of each cell of a window: row x nx + column; outside, the nearest."""
         col = np.searchsorted(self.edges_x, self.x.at(window), side="right") - 1
         row = np.searchsorted(self.edges_y, self.y.at(window), side="right") - 1
-        rows, cols = self.wm2.shape
+        rows, cols = self.edges_y.size - 1, self.edges_x.size - 1
         return np.asarray(np.clip(row, 0, rows - 1) * cols + np.clip(col, 0, cols - 1))
 
 
 class CellMeans:
-    """Gathers the insolation of all ground in each cell of a supplied grid; sums are whole numbers."""
+    """Gathers the insolation of all ground in each cell of a supplied grid, flat and on slopes; sums are whole numbers."""
 
     def __init__(self, cells: SourceCells) -> None:
         self._cells = cells
-        self._sums = np.zeros((2, cells.wm2.size), np.int64)
+        self._sums = np.zeros((3, cells.count), np.int64)
         self._lock = threading.Lock()
 
-    def add(self, insolation: NDArray[np.int16], area_m2: NDArray[np.int64], window: Window) -> None:
-        """Add the cells of a window that have an insolation."""
-        known = insolation != stored_fill("insolation")
+    def add(self, flat: NDArray[np.int16], on_slopes: NDArray[np.int16], area_m2: NDArray[np.int64], window: Window) -> None:
+        """Add the cells of a window that have both."""
+        fill = stored_fill("insolation")
+        known = (flat != fill) & (on_slopes != fill)
         number, area = self._cells.numbers(window)[known], area_m2[known]
         sums = np.zeros_like(self._sums)
-        np.add.at(sums[0], number, insolation[known] * area)
-        np.add.at(sums[1], number, area)
+        np.add.at(sums[0], number, flat[known] * area)
+        np.add.at(sums[1], number, on_slopes[known] * area)
+        np.add.at(sums[2], number, area)
         with self._lock:
             self._sums += sums
 
     def factors(self) -> NDArray[np.float64]:
-        """What each grid cell's light must be multiplied by, so that its mean over the tile is the supplied one."""
-        total, area = self._sums
-        mean = total * layer("insolation").step / np.maximum(area, 1)
-        wanted = self._cells.wm2.ravel()
-        return np.where(mean > 0, wanted / np.where(mean > 0, mean, 1.0), 1.0)
+        """What each grid cell's light on slopes must be multiplied by to hold the energy of its flat ground.
+
+        A cell that the tile cuts, or one so small that a single slope fills it, tells nothing of that: it takes the
+        factor of all ground of the tile.
+        """
+        flat, on_slopes, area = self._sums
+        whole = flat.sum() / on_slopes.sum() if on_slopes.sum() > 0 else 1.0
+        enough = (area >= LEAST_CELL_M2) & (2 * area >= area.max()) & (on_slopes > 0)
+        return np.where(enough, flat / np.where(enough, on_slopes, 1), whole)
 
 
 def rescaled(values: NDArray[np.int16], factors: NDArray[np.float64], numbers: NDArray[np.intp]) -> NDArray[np.int16]:
-    """Stored fluxes of a window times the factor of their grid cell; a gap in the supplied grid becomes a gap."""
+    """Stored fluxes of a window times the factor of their grid cell."""
     one = layer("insolation")
     assert one.nodata is not None
     light = values * factors[numbers]
-    known = (values != one.nodata) & ~np.isnan(light)
+    known = values != one.nodata
     steps = np.minimum(np.floor(np.where(known, light, 0.0) + 0.5), one.high)
     return np.where(known, steps, one.nodata).astype(np.int16)
 

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from firnlight.core.errors import SettingsProblem
-from firnlight.core.grid import Window
+from firnlight.core.grid import HIGHEST_M, LOWEST_M, Window
 from firnlight.core.lattice import Lattice
 from firnlight.core.layers import flag_bit, layer
 from firnlight.core.settings import Longwave
@@ -18,7 +18,7 @@ from firnlight.physics.chain_fast import net_block
 from firnlight.physics.humidity import vapour_pressure_at
 from firnlight.physics.light import slope_tables
 from firnlight.stages.albedo import stored_fill
-from firnlight.stages.insolation import HIGHEST_M, LEVEL_STEP_M, LOWEST_M, Relief, levels_m, without_files
+from firnlight.stages.insolation import LEVEL_STEP_M, Relief, levels_m, without_files
 from firnlight.stages.stage import Stage
 
 LONGWAVE = Stage(
