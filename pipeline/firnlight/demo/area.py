@@ -63,7 +63,7 @@ snow_fraction = "gascoin_2020"
 source = "clear-sky"
 atmosphere = {{ {air} }}
 terrain = true
-relative_uncertainty = 0.01            # what this invented sky errs by, shared by all cells and days
+relative_uncertainty = 0.01            # what this invented sky errs by on a day, shared by all cells
 local_uncertainty = 0.03               # and what it errs by here and there
 
 [longwave]

@@ -153,15 +153,29 @@ def _horizon_profile(grid: Grid) -> dict[str, Any]:
     }  # fmt: skip
 
 
+def _known_part(height: NDArray[np.float32], core: Window, margin: int) -> tuple[NDArray[np.float32], tuple[int, int]]:
+    """The part of the heights with the core, a cell around it and all known ground, and where the core begins in it."""
+    known = ~np.isnan(height)
+    cuts, begin = [], []
+    for axis, size in ((0, core.rows), (1, core.cols)):
+        at = np.flatnonzero(known.any(axis=1 - axis))
+        first = min(int(at[0]) if at.size else margin, margin - 1)
+        last = max(int(at[-1]) + 1 if at.size else 0, margin + size + 1)
+        cuts.append(slice(first, last))
+        begin.append(margin - first)
+    return np.ascontiguousarray(height[cuts[0], cuts[1]]), (begin[0], begin[1])
+
+
 def _piece(
     height: NDArray[np.float32], core: Window, margin: int, cell_m: float, horizon: Any,
     writers: dict[str, CogWriter], pool: ThreadPoolExecutor, ahead: int,
 ) -> None:  # fmt: skip
-    inner = (slice(margin, margin + core.rows), slice(margin, margin + core.cols))
+    height, (down, across) = _known_part(height, core, margin)
+    inner = (slice(down, down + core.rows), slice(across, across + core.cols))
     east, north = (np.empty((core.rows, core.cols), np.float32) for _ in range(2))
     for row in range(0, core.rows, STRIP):
         rows = min(STRIP, core.rows - row)
-        edge = height[margin + row - 1 : margin + row + rows + 1, margin - 1 : margin + core.cols + 1]
+        edge = height[down + row - 1 : down + row + rows + 1, across - 1 : across + core.cols + 1]
         mine = slice(row, row + rows)
         east[mine], north[mine] = gradient(edge, cell_m)
         slope, aspect = slope_aspect_deg(east[mine], north[mine])
