@@ -108,14 +108,32 @@ def test_many_days_are_more_certain_of_weather_and_no_more_of_the_sensor(uncerta
             assert math.hypot(*each) * 0.995 <= spans[region][name] <= sum(each) * 1.005
 
 
-def test_a_sky_without_local_error_leaves_that_of_albedo(area):
+def test_the_local_error_of_the_sky_is_another_each_day_and_that_of_albedo_is_not(area):
     area.edit("[regions]", NO_LIMIT)
-    assert area.night("--quiet") == 0
-    plain = rows(area, "region")
-    area.edit("\nlocal_uncertainty = 0.03", "\nlocal_uncertainty = 0.08")
-    assert area.night("--quiet") == 0
-    for one, more in zip(plain, rows(area, "region"), strict=True):
-        assert one["absorbed_wm2"] == more["absorbed_wm2"]
-        assert (one["albedo_u"], one["absorbed_u_shared"]) == (more["albedo_u"], more["absorbed_u_shared"])
-        assert 0 < one["absorbed_u_local"] < more["absorbed_u_local"]
-        assert one["net_radiation_u"] < more["net_radiation_u"]
+    found, before = {}, 0.03
+    for sky in (0.0, 0.3):
+        area.edit(f"\nlocal_uncertainty = {before}", f"\nlocal_uncertainty = {sky}")
+        before = sky
+        assert area.night("--quiet") == 0
+        found[sky] = rows(area, "region", "--every", "day"), rows(area, "region")
+    for plain, more in zip(*(days + spans for days, spans in found.values()), strict=True):
+        assert plain["absorbed_wm2"] == more["absorbed_wm2"]
+        assert (plain["albedo_u"], plain["absorbed_u_shared"]) == (more["albedo_u"], more["absorbed_u_shared"])
+        assert 0 < plain["absorbed_u_local"] < more["absorbed_u_local"]
+        assert plain["net_radiation_u"] < more["net_radiation_u"]
+    (days, spans), (more_days, more_spans) = found.values()
+    for span, more_span in zip(spans, more_spans, strict=True):
+        pairs = zip(days, more_days, strict=True)
+        seen = [(one, more, one["seen_km2"]) for one, more in pairs if one["region"] == span["region"]]
+        whole = sum(km2 for *_, km2 in seen)
+        sky = [sky_part(one, more) * km2 / whole for one, more, km2 in seen]
+        assert sky_part(span, more_span) == pytest.approx(math.hypot(*sky), rel=1e-9)
+        albedo = [one["absorbed_u_local"] * km2 / whole for one, _, km2 in seen]
+        # one error through all days, though snow and light fall on other ground each day
+        assert span["absorbed_u_local"] == pytest.approx(sum(albedo), rel=0.05)
+    assert sum(row["region"] == spans[0]["region"] for row in days) == 2
+
+
+def sky_part(plain, more):
+    """Local uncertainty that came with the sky."""
+    return math.sqrt(more["absorbed_u_local"] ** 2 - plain["absorbed_u_local"] ** 2)
