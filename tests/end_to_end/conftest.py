@@ -1,12 +1,34 @@
 """A small Morrowfell area for each test, and the command line run in this process."""
 
+import json
 import shutil
 from pathlib import Path
 
 import pytest
+import rasterio
 
 from firnlight.cli import main
 from firnlight.demo.area import write_demo
+
+GAP = -32768  # stored where nothing is known
+
+
+def cells(path):
+    """Stored integers of the first band of a map."""
+    with rasterio.open(path) as dataset:
+        return dataset.read(1)
+
+
+def days(area):
+    """Folders of maps of every tile-day."""
+    return sorted((area.store / "maps").glob("*/*"))
+
+
+def rows(area, *arguments):
+    """Rows of a budget as the command prints them."""
+    code, out, err = area.run("budget", "--json", "--quiet", *arguments)
+    assert code == 0, err
+    return json.loads(out)["rows"]
 
 
 @pytest.fixture(scope="session")

@@ -7,22 +7,7 @@ import numpy as np
 import pytest
 import rasterio
 
-GAP = -32768
-
-
-def cells(path):
-    with rasterio.open(path) as dataset:
-        return dataset.read(1)
-
-
-def days(area):
-    return sorted((area.store / "maps").glob("*/*"))
-
-
-def rows(area, *arguments):
-    code, out, err = area.run("budget", "--json", "--quiet", *arguments)
-    assert code == 0, err
-    return json.loads(out)["rows"]
+from end_to_end.conftest import GAP, cells, days, rows
 
 
 def test_net_radiation_closes_in_every_cell_and_row(done_area):

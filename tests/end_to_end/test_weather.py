@@ -8,22 +8,7 @@ import pytest
 import rasterio
 import xarray as xr
 
-GAP = -32768
-
-
-def cells(path):
-    with rasterio.open(path) as dataset:
-        return dataset.read(1)
-
-
-def days(area):
-    return sorted((area.store / "maps").glob("*/*"))
-
-
-def rows(area, *arguments):
-    code, out, err = area.run("budget", "--json", "--quiet", *arguments)
-    assert code == 0, err
-    return json.loads(out)["rows"]
+from end_to_end.conftest import GAP, cells, days, rows
 
 
 def without_day(area, day):

@@ -88,7 +88,8 @@ def demo(folder: Path, tiles: int, size: int, scenes: int, years: int, seed: int
       firnlight demo morrowfell
       firnlight demo morrowfell --tiles 4 --size 1024 --scenes 12
 
-    Write the invented Morrowfell area at any size, with its truth and a ready workflow.
+    Write the invented Morrowfell area at any size, with its truth and a ready workflow. Tiles above 512
+    cells a side have the truth of albedo and cloud, not that of fluxes.
 
     Writes into FOLDER, which must be new or empty. Next: firnlight night FOLDER/workflow.toml
     """
